@@ -27,7 +27,7 @@ SPARSE_LIMIT = 2_000_000
 """Largest sector for which `ground_state` is tried (states)."""
 DENSE_LIMIT = 4_000
 """Largest sector that is diagonalised in full (states)."""
-VECTOR_LIMIT = 150_000_000
+VECTOR_LIMIT = 100_000_000
 """Largest total size of all eigenvectors kept by `thermal` (numbers; 8 bytes each)."""
 
 _DENSE_BELOW = 200
@@ -49,11 +49,6 @@ class OneSpeciesBasis:
     def size(self) -> int:
         """Number of states."""
         return len(self.codes)
-
-    def place_values(self) -> NDArray[np.int64]:
-        """Value of one atom on each site in the code of a state."""
-        sites = self.occupations.shape[1]
-        return (self.cutoff + 1) ** np.arange(sites - 1, -1, -1, dtype=np.int64)
 
 
 @dataclass(frozen=True, eq=False)
@@ -109,6 +104,15 @@ def count_states(sites: int, cutoff: int, atoms: int) -> int:
     return int(ways[atoms])
 
 
+def _place_values(sites: int, cutoff: int) -> NDArray[np.int64]:
+    """Value of one atom on each site in the code of a state."""
+    if sites * np.log2(cutoff + 1) >= 63:
+        raise ResourceError(
+            f"cluster: {sites} sites with n_max = {cutoff} exceed a 63-bit state code; choose fewer sites."
+        )
+    return (cutoff + 1) ** np.arange(sites - 1, -1, -1, dtype=np.int64)
+
+
 @lru_cache(maxsize=256)
 def one_species_basis(sites: int, cutoff: int, atoms: int) -> OneSpeciesBasis:
     """Basis of one species at fixed atom number (built site by site, never through the full space)."""
@@ -123,8 +127,7 @@ def one_species_basis(sites: int, cutoff: int, atoms: int) -> OneSpeciesBasis:
         occupation = np.repeat(low, choices) + np.arange(choices.sum()) - start
         rows = np.column_stack([np.repeat(rows, choices, axis=0), occupation])
         left = np.repeat(left, choices) - occupation
-    basis = OneSpeciesBasis(cutoff, rows, np.empty(0, dtype=np.int64))
-    return OneSpeciesBasis(cutoff, rows, rows @ basis.place_values())
+    return OneSpeciesBasis(cutoff, rows, rows @ _place_values(sites, cutoff))
 
 
 @lru_cache(maxsize=4096)
@@ -134,13 +137,13 @@ def _annihilator(sites: int, cutoff: int, atoms: int, site: int) -> sp.csr_array
     smaller = one_species_basis(sites, cutoff, atoms - 1)
     occupation = basis.occupations[:, site]
     column = np.flatnonzero(occupation)
-    row = np.searchsorted(smaller.codes, basis.codes[column] - basis.place_values()[site])
+    row = np.searchsorted(smaller.codes, basis.codes[column] - _place_values(sites, cutoff)[site])
     return sp.csr_array((np.sqrt(occupation[column]), (row, column)), shape=(smaller.size, basis.size))
 
 
 def _hopping_matrix(model: LatticeModel, species: int, basis: OneSpeciesBasis) -> sp.csr_array:
     """- sum_bonds t (b+_i b_j + h.c.) of one species in its own basis."""
-    place = basis.place_values()
+    place = _place_values(model.cluster.sites, basis.cutoff)
     rows, columns, values = [], [], []
     for (i, j), t in zip(model.cluster.bonds, model.hopping[species], strict=True):
         n_i, n_j = basis.occupations[:, i], basis.occupations[:, j]
@@ -175,8 +178,9 @@ def _sector_size(model: LatticeModel, numbers: Numbers) -> int:
 def _refuse_above(limit: int, size: int, model: LatticeModel, numbers: Numbers, purpose: str) -> None:
     if size > limit:
         raise ResourceError(
-            f"cluster: {model.cluster.sites} sites with N = {numbers}, n_max = {model.cutoff} have {size} states,"
-            f" the limit for {purpose} is {limit}; choose fewer sites, fewer atoms or a smaller n_max."
+            f"cluster: {model.cluster.sites} sites with N = {numbers}, n_max = {model.cutoff} have {size}"
+            f" states, the limit for {purpose} is {limit};"
+            " choose fewer sites, fewer atoms or a smaller n_max."
         )
 
 
@@ -251,7 +255,7 @@ def ground_state(model: LatticeModel, N: int | Sequence[int] | None = None) -> S
     """Ground state at fixed atom numbers, or (N omitted) of all sectors at the model's mu.
 
     Where sectors or levels are degenerate this is one vector of the degenerate set (for t > 0 on a connected
-    cluster the ground state of a sector is unique). Accuracy: residual of the sparse solver at machine precision.
+    cluster the ground state of a sector is unique). The sparse solver runs to machine precision.
     Raises InputError for impossible numbers and ResourceError above SPARSE_LIMIT states.
     """
     candidates = sectors(model) if N is None else [_checked_numbers(model, N)]
@@ -269,9 +273,9 @@ def ground_state(model: LatticeModel, N: int | Sequence[int] | None = None) -> S
 def thermal(model: LatticeModel, T: float, N: int | Sequence[int] | None = None) -> State:
     """Thermal state at T > 0 (units of the couplings): grand-canonical, or at fixed numbers if N is given.
 
-    Every sector is diagonalised in full; levels with a weight below 1e-18 are left out of the correlators (not
-    of the free energy). The cutoff n_max is part of the model: raise it until results stop moving.
-    Raises InputError for T <= 0 and ResourceError for sectors above DENSE_LIMIT or vectors above VECTOR_LIMIT.
+    Every sector is diagonalised in full; levels with a weight below 1e-18 are left out of the correlators
+    (not of the free energy). The cutoff n_max is part of the model: raise it until results stop moving.
+    Raises InputError for T <= 0, ResourceError for a sector above DENSE_LIMIT or vectors above VECTOR_LIMIT.
     """
     if not (np.isfinite(T) and T > 0):
         raise InputError(f"T: got {T}, must be finite and above 0 (use ground_state for T = 0).")
@@ -282,8 +286,9 @@ def thermal(model: LatticeModel, T: float, N: int | Sequence[int] | None = None)
     total = sum(size**2 for size in sizes)
     if total > VECTOR_LIMIT:
         raise ResourceError(
-            f"cluster: {model.cluster.sites} sites with n_max = {model.cutoff} need {total} eigenvector entries,"
-            f" the limit is {VECTOR_LIMIT}; choose fewer sites, a smaller n_max or fixed atom numbers."
+            f"cluster: {model.cluster.sites} sites with n_max = {model.cutoff} need {total} eigenvector"
+            f" entries, the limit is {VECTOR_LIMIT};"
+            " choose fewer sites, a smaller n_max or fixed atom numbers."
         )
     solved = [_diagonalise(model, numbers) for numbers in chosen]
     levels = np.concatenate([energies for energies, _ in solved])
@@ -363,7 +368,7 @@ def pair(state: State) -> Floats:
 
 
 def antipair(state: State) -> Floats:
-    """<A+_i A_j> with A = b+_2 b_1, shape (sites, sites); the diagonal is <n_1 (n_2 + 1)>, free of the cutoff.
+    """<A+_i A_j> with A = b+_2 b_1, shape (sites, sites); its diagonal <n_1 (n_2 + 1)> is free of the cutoff.
 
     Off the diagonal the cutoff does no harm: a site raised above n_max would have no partner in the bra.
     """
@@ -410,7 +415,8 @@ def four_body(state: State, a: int, b: int) -> Floats:
             continue
         vectors = _weighted(block)
         once = [_annihilate(model, block.numbers, vectors, a, j) for j in range(sites)]
-        total += _gram([_annihilate(model, tuple(remaining), v, b, l) for v in once for l in range(sites)])
+        twice = [_annihilate(model, tuple(remaining), v, b, site) for v in once for site in range(sites)]
+        total += _gram(twice)
     return total.reshape(sites, sites, sites, sites).transpose(0, 1, 3, 2)
 
 
@@ -436,7 +442,7 @@ def momentum_distribution(state: State, a: int, momenta: Floats | None = None) -
 def noise_map(state: State, a: int, b: int, momenta: Floats | None = None) -> Floats:
     """Normal-ordered noise map <b_a(k)+ b_b(k')+ b_b(k') b_a(k)> - <n_a(k)><n_b(k')>, shape (count, count).
 
-    b(k) = sites^(-1/2) sum_j exp(-i k.r_j) b_j. The shot-noise term delta_ab delta_kk' <n_a(k)> is not included.
+    b(k) = sites^(-1/2) sum_j exp(-i k.r_j) b_j. The shot-noise term delta_ab delta_kk' <n_a(k)> is left out.
     Exact in the given state: a fixed-number state shows its fixed-number correlations.
     """
     _, phases = _phases(state.model, momenta)

@@ -5,7 +5,7 @@ Out: frozen `Cluster` and `LatticeModel`, checked once, here.
 
     H = - sum_<ij>,a t_a (b+_ia b_ja + h.c.) + sum_i,a U_a/2 n(n-1) + U12 sum_i n_i1 n_i2 - sum_i,a mu_ia n_ia
 
-The bond list is literal: every entry adds its hopping term once, so a pair listed twice hops twice as strongly.
+The bond list is literal: each entry adds its hopping term once; a pair listed twice hops twice as strongly.
 """
 
 from collections.abc import Sequence
@@ -48,7 +48,7 @@ class Cluster:
 
     @property
     def momenta(self) -> Floats:
-        """Grid momenta 2 pi m / L of the box, shape (sites, dimension), unit 1/lattice constant, m = 0..L-1."""
+        """Grid momenta 2 pi m / L of the box, shape (sites, dimension), m = 0..L-1, lattice constant 1."""
         axes = [2 * np.pi * np.arange(length) / length for length in self.shape]
         return np.array(list(product(*axes)), dtype=float)
 
