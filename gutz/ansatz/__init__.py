@@ -1,0 +1,1 @@
+"""What is minimised: the single-site thermal state and the variational functionals built on it."""
