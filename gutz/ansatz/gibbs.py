@@ -8,10 +8,13 @@ here as divided differences of exp (Daleckii and Krein), which have none. The fr
 three times and the state twice; a further derivative is refused, never wrong.
 """
 
+from collections.abc import Callable
 from typing import Any, NamedTuple
 
 import jax
 import jax.numpy as jnp
+from jax.extend.core import Primitive
+from jax.interpreters import ad, batching, mlir
 
 from gutz.errors import InputError
 
@@ -123,71 +126,6 @@ def _entropy_jvp(primals: Any, tangents: Any) -> Any:
     return entropy(h, T), beta * (centred * change).sum((-1, -2))
 
 
-@jax.custom_jvp
-def state(h: Array, T: Array) -> Array:
-    """Density matrix exp(-h/T)/Z, at T = 0 the (equally mixed) ground state; shape (..., state, state)."""
-    lv = levels(h, T)
-    return _from_levels(lv, _diagonal_matrix(lv.weight))
-
-
-@state.defjvp
-def _state_jvp(primals: Any, tangents: Any) -> Any:
-    (h, T), (dh, dT) = primals, tangents
-    return state(h, T), state_change(h, T, _effective_change(h, T, dh, dT))
-
-
-@jax.custom_jvp
-def state_change(h: Array, T: Array, A: Array) -> Array:
-    """First-order change of the state under h -> h + A at fixed T; linear in A, shape (..., state, state)."""
-    lv = levels(h, T)
-    inner = -response_kernel(lv) * _to_levels(lv, A)
-    normalised = inner - _diagonal_matrix(lv.weight * _trace(inner)[..., None])
-    return _from_levels(lv, normalised)
-
-
-@state_change.defjvp
-def _state_change_jvp(primals: Any, tangents: Any) -> Any:
-    (h, T, A), (dh, dT, dA) = primals, tangents
-    beta = jnp.where(T > 0, 1.0 / jnp.where(T > 0, T, 1.0), 0.0)
-    value = state_change(h, T, A)
-    change = (
-        state_change(h, T, dA)
-        + _state_second_change(h, T, A, _effective_change(h, T, dh, dT))
-        - value * (dT * beta)[..., None, None]
-    )
-    return value, change
-
-
-@jax.custom_jvp
-def _state_second_change(h: Array, T: Array, A: Array, B: Array) -> Array:
-    """Second-order change of the state, bilinear and symmetric in A and B."""
-    lv = levels(h, T)
-    kernel = -response_kernel(lv)
-    a, b = _to_levels(lv, A), _to_levels(lv, B)
-    first_a, first_b = kernel * a, kernel * b
-    third = _second_divided_difference(lv, kernel)
-    second = jnp.einsum("...ijk,...ij,...jk->...ik", third, a, b) + jnp.einsum(
-        "...ijk,...ij,...jk->...ik", third, b, a
-    )
-    trace_a, trace_b, trace_ab = _trace(first_a), _trace(first_b), _trace(second)
-    weights = _diagonal_matrix(lv.weight)
-    inner = (
-        second
-        - first_a * trace_b[..., None, None]
-        - first_b * trace_a[..., None, None]
-        + weights * (2 * trace_a * trace_b - trace_ab)[..., None, None]
-    )
-    return _from_levels(lv, inner)
-
-
-@_state_second_change.defjvp
-def _refuse_third_derivative(primals: Any, tangents: Any) -> Any:
-    raise InputError(
-        "a third derivative of the thermal state was asked for; the free energy can be differentiated three "
-        "times, fillings and order parameters twice, and responses such as the compressibility once"
-    )
-
-
 def _second_divided_difference(lv: Levels, first: Array) -> Array:
     """f[E_i, E_j, E_k] for f = exp(-E/T)/Z (a step at T = 0), from f[E_i, E_j]; shape (..., i, j, k)."""
     E, beta = lv.energy, lv.inverse_temperature[..., None, None, None]
@@ -211,6 +149,164 @@ def _second_divided_difference(lv: Levels, first: Array) -> Array:
         series = series + coefficient * homogeneous
     close = (beta > 0) & (v < _SERIES_RANGE)
     return jnp.where(close, lv.weight[..., low] * beta**2 * series, quotient)
+
+
+def state(h: Array, T: Array) -> Array:
+    """Density matrix exp(-h/T)/Z, at T = 0 the (equally mixed) ground state; shape (..., state, state)."""
+    return _state_p.bind(*_same_rank(h, T))
+
+
+def state_change(h: Array, T: Array, A: Array) -> Array:
+    """First-order change of the state under h -> h + A at fixed T; linear in A, shape (..., state, state)."""
+    return _first_p.bind(*_same_rank(h, T, A))
+
+
+def _state(h: Array, T: Array) -> Array:
+    lv = levels(h, T)
+    return _from_levels(lv, _diagonal_matrix(lv.weight))
+
+
+def _first(h: Array, T: Array, A: Array) -> Array:
+    lv = levels(h, T)
+    inner = -response_kernel(lv) * _to_levels(lv, A)
+    return _from_levels(lv, inner - _diagonal_matrix(lv.weight * _trace(inner)[..., None]))
+
+
+def _second(h: Array, T: Array, A: Array, B: Array) -> Array:
+    """Second-order change of the state, bilinear and symmetric in A and B."""
+    lv = levels(h, T)
+    kernel = -response_kernel(lv)
+    a, b = _to_levels(lv, A), _to_levels(lv, B)
+    first_a, first_b = kernel * a, kernel * b
+    third = _second_divided_difference(lv, kernel)
+    second = jnp.einsum("...ijk,...ij,...jk->...ik", third, a, b) + jnp.einsum(
+        "...ijk,...ij,...jk->...ik", third, b, a
+    )
+    trace_a, trace_b, trace_ab = _trace(first_a), _trace(first_b), _trace(second)
+    weights = _diagonal_matrix(lv.weight)
+    inner = (
+        second
+        - first_a * trace_b[..., None, None]
+        - first_b * trace_a[..., None, None]
+        + weights * (2 * trace_a * trace_b - trace_ab)[..., None, None]
+    )
+    return _from_levels(lv, inner)
+
+
+def _same_rank(h: Array, T: Array, *changes: Array) -> tuple[Array, ...]:
+    """Pad batch shapes with leading ones to equal rank, and give the changes the full batch shape."""
+    T = jnp.asarray(T)
+    batch = jnp.broadcast_shapes(h.shape[:-2], T.shape, *(A.shape[:-2] for A in changes))
+
+    def pad(x: Array, trailing: int) -> Array:
+        return x.reshape((1,) * (len(batch) + trailing - x.ndim) + x.shape)
+
+    full = [jnp.broadcast_to(A, batch + A.shape[-2:]) for A in changes]
+    return (pad(h, 2), pad(T, 0), *full)
+
+
+def _primitive(name: str, function: Callable[..., Array]) -> Any:
+    """Make `function` an operation of its own, so that jax never differentiates its insides.
+
+    A custom_jvp rule does not suffice: jax drops it from the linear part it transposes, and a reverse derivative
+    of a reverse derivative would go through the eigensolver after all.
+    """
+    primitive = Primitive(name)
+    primitive.def_impl(jax.jit(function))
+
+    def shape(*args: Any) -> Any:
+        out = jax.eval_shape(function, *(jax.ShapeDtypeStruct(a.shape, a.dtype) for a in args))
+        return jax.core.ShapedArray(out.shape, out.dtype)
+
+    def batch(args: Any, axes: Any) -> Any:
+        lead = [
+            jnp.expand_dims(x, 0) if axis is None else jnp.moveaxis(x, axis, 0)
+            for x, axis in zip(args, axes, strict=True)
+        ]
+        return primitive.bind(*lead), 0
+
+    primitive.def_abstract_eval(shape)
+    mlir.register_lowering(primitive, mlir.lower_fun(function, multiple_results=False))
+    batching.primitive_batchers[primitive] = batch
+    return primitive
+
+
+_state_p = _primitive("thermal_state", _state)
+_first_p = _primitive("thermal_state_change", _first)
+_second_p = _primitive("thermal_state_second_change", _second)
+
+
+def _tangent(tangent: Any, primal: Array) -> Array:
+    return jnp.zeros(primal.shape) if isinstance(tangent, ad.Zero) else tangent
+
+
+def _state_jvp(primals: Any, tangents: Any) -> Any:
+    h, T = primals
+    dh, dT = map(_tangent, tangents, primals)
+    return _state_p.bind(h, T), state_change(h, T, _effective_change(h, T, dh, dT))
+
+
+def _first_jvp(primals: Any, tangents: Any) -> Any:
+    (h, T, A), (dh, dT, dA) = primals, tangents
+    value = _first_p.bind(h, T, A)
+    change = jnp.zeros(value.shape) if isinstance(dA, ad.Zero) else _first_p.bind(h, T, dA)
+    if not (isinstance(dh, ad.Zero) and isinstance(dT, ad.Zero)):
+        dh, dT = _tangent(dh, h), _tangent(dT, T)
+        beta = jnp.where(T > 0, 1.0 / jnp.where(T > 0, T, 1.0), 0.0)
+        other = jnp.broadcast_to(_effective_change(h, T, dh, dT), value.shape)
+        full = jnp.broadcast_to(A, value.shape)
+        change = change + _second_p.bind(h, T, full, other) - value * (dT * beta)[..., None, None]
+    return value, change
+
+
+def _second_jvp(primals: Any, tangents: Any) -> Any:
+    (h, T, A, B), (dh, dT, dA, dB) = primals, tangents
+    if not (isinstance(dh, ad.Zero) and isinstance(dT, ad.Zero)):
+        raise InputError(
+            "a third derivative of the thermal state was asked for; the free energy can be differentiated three "
+            "times, fillings and order parameters twice, and responses such as the compressibility once"
+        )
+    value = _second_p.bind(h, T, A, B)
+    change = jnp.zeros(value.shape)
+    if not isinstance(dA, ad.Zero):
+        change = change + _second_p.bind(h, T, dA, B)
+    if not isinstance(dB, ad.Zero):
+        change = change + _second_p.bind(h, T, A, dB)
+    return value, change
+
+
+def _unbroadcast(x: Array, shape: tuple[int, ...]) -> Array:
+    axes = tuple(i for i, (have, want) in enumerate(zip(x.shape, shape, strict=True)) if want == 1 != have)
+    return x.sum(axes, keepdims=True) if axes else x
+
+
+def _flip(x: Array) -> Array:
+    return jnp.swapaxes(x, -1, -2)
+
+
+def _first_transpose(cotangent: Any, h: Array, T: Array, A: Any) -> Any:
+    """tr(C† S[A]) is symmetric in A and C."""
+    if isinstance(cotangent, ad.Zero):
+        return [None, None, ad.Zero(A.aval)]
+    return [None, None, _unbroadcast(_first_p.bind(h, T, cotangent), A.aval.shape)]
+
+
+def _second_transpose(cotangent: Any, h: Array, T: Array, A: Any, B: Any) -> Any:
+    """tr(C† S[A, B]) is symmetric in A, B and C†."""
+    first = ad.is_undefined_primal(A)
+    linear, other = (A, B) if first else (B, A)
+    if isinstance(cotangent, ad.Zero):
+        out: Any = ad.Zero(linear.aval)
+    else:
+        out = _unbroadcast(_flip(_second_p.bind(h, T, other, _flip(cotangent))), linear.aval.shape)
+    return [None, None, out, None] if first else [None, None, None, out]
+
+
+ad.primitive_jvps[_state_p] = _state_jvp
+ad.primitive_jvps[_first_p] = _first_jvp
+ad.primitive_jvps[_second_p] = _second_jvp
+ad.primitive_transposes[_first_p] = _first_transpose
+ad.primitive_transposes[_second_p] = _second_transpose
 
 
 def response(h: Array, T: Array, operators: Array) -> Array:
