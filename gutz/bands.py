@@ -33,7 +33,7 @@ _LADDER = sorted(base * 2**n + 1 for base in (4, 6) for n in range(1, 12))
 class Bands:
     """One axis of a lattice in recoil energies and spacings; arrays of the depths' shape.
 
-    t, t2: hopping to the first and second neighbour; t2 is good to about 1e-11 t, not to its own digits.
+    t, t2: hopping to the first and second neighbour; t2 is good to about 1e-10 t, not to its own digits.
     gap: bottom of the first excited band minus top of the lowest. excitation: distance of the bands' means.
     bottom, top: edges of the lowest band, measured from the potential's minimum.
     quartic: d ∫ w⁴ dx of the lowest band's Wannier function w.
