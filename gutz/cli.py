@@ -1,0 +1,216 @@
+"""The command `gutz`: lattice, solve, scan, check.
+
+In:  a scan file (TOML) and options.
+Out: results on stdout, notes on stderr, files in the folder named with --out, and an exit code:
+     0 done; 1 done, but some points are not to be trusted; 2 mistake in command line or file; 3 stored data
+     unreadable; 4 output exists or is in use; 5 out of disk, memory or time; 70 internal error;
+     130 / 143 stopped, progress saved.
+The work is in `gutz.commands`, loaded when a command runs, so that --help answers at once.
+"""
+
+import os
+import sys
+import tempfile
+import traceback
+from collections.abc import Callable, Sequence
+from importlib.metadata import PackageNotFoundError, version
+from pathlib import Path
+from typing import Any
+
+import click
+
+from gutz import cache
+from gutz.errors import GutzError
+
+INTERNAL_ERROR = 70
+INTERRUPTED = 130
+
+_FILE = click.argument("file", type=click.Path(path_type=Path))
+_SET = click.option(
+    "--set", "overrides", multiple=True, metavar="KEY=VALUE", help="Change one setting: section.key=value. Repeatable."
+)
+_AT = click.option(
+    "--at", "at", multiple=True, metavar="AXIS=VALUE", help="Choose a point: a value for an axis of the file. Repeatable."
+)
+_JSON = click.option("--json", "as_json", is_flag=True, help="Write JSON on stdout, and nothing else there.")
+_QUIET = click.option("--quiet", is_flag=True, help="No notes and no progress.")
+_FORCE = click.option("--force", is_flag=True, help="Replace what is in the output folder.")
+_DEBUG = click.option("--debug", is_flag=True, help="Show the full traceback of an error.")
+
+
+def _version() -> str:
+    try:
+        return version("gutz")
+    except PackageNotFoundError:
+        return "(source tree)"
+
+
+def _out(help_text: str) -> Callable[[Any], Any]:
+    return click.option("--out", metavar="DIR", help=help_text)
+
+
+def _example(text: str) -> str:
+    """Help text that starts with something to run; \\b keeps click from joining its lines."""
+    return f"\b\n{text}"
+
+
+@click.group(
+    help=_example(
+        "Example: gutz scan scans/rubidium-cubic.toml\n\n"
+        "Phase diagrams, temperatures and entropies of two-species bosons in optical lattices.\n\n"
+        "Every command reads the same kind of file; scans/README.md explains it."
+    ),
+    context_settings={"help_option_names": ["-h", "--help"]},
+)
+@click.version_option(_version(), "--version", message="gutz %(version)s")
+def cli() -> None:
+    """Collect the commands."""
+
+
+@cli.command(
+    help=_example(
+        "Example: gutz lattice scans/rubidium-cubic.toml\n\n"
+        "Hubbard parameters of the file's lattice, against its depth or scattering length.\n\n"
+        "With --out, a figure as well (PNG and PDF)."
+    )
+)
+@_FILE
+@_SET
+@_AT
+@click.option("--unit", default="Hz", show_default=True, help="Unit of energy: Hz, kHz, nK, E_R or U1.")
+@_out("Write a figure into this folder.")
+@_JSON
+@_QUIET
+@_FORCE
+@_DEBUG
+def lattice(**options: Any) -> int:
+    """Hubbard parameters."""
+    from gutz.commands import lattice as command
+
+    return command.run(**options)
+
+
+@cli.command(
+    help=_example(
+        "Example: gutz solve scans/rubidium-cubic.toml --at depth=12 --at T=5\n\n"
+        "Solve one point, and print everything known about it.\n\n"
+        "Axes of the file need a value each; it need not lie on the scan's grid."
+    )
+)
+@_FILE
+@_SET
+@_AT
+@_JSON
+@_QUIET
+@_DEBUG
+def solve(**options: Any) -> int:
+    """One point."""
+    _keep_compiled_code(quiet=options["quiet"])
+    from gutz.commands import solve as command
+
+    return command.run(**options)
+
+
+@cli.command(
+    help=_example(
+        "Example: gutz scan scans/rubidium-cubic.toml --out rubidium\n\n"
+        "Solve every point of the file's axes; save the numbers and figures (PNG and PDF).\n\n"
+        "Ctrl-C stops after the chunk at work; the same command with --resume continues."
+    )
+)
+@_FILE
+@_SET
+@_out("Folder for the results [default: the file's name].")
+@click.option("--resume", is_flag=True, help="Continue a run that was stopped.")
+@click.option("--netcdf", is_flag=True, help="Also write one netCDF file, data.nc.")
+@_JSON
+@_QUIET
+@_FORCE
+@_DEBUG
+def scan(**options: Any) -> int:
+    """A whole scan."""
+    _keep_compiled_code(quiet=options["quiet"])
+    from gutz.commands import scan as command
+
+    return command.run(**options)
+
+
+@cli.command(
+    help=_example(
+        "Example: gutz check scans/rubidium-cubic.toml\n\n"
+        "Check a file and estimate the work: points, chunks, memory, disk, time. Computes nothing."
+    )
+)
+@_FILE
+@_SET
+@_JSON
+@_QUIET
+@_DEBUG
+def check(**options: Any) -> int:
+    """Check and estimate."""
+    from gutz.commands import check as command
+
+    return command.run(**options)
+
+
+def _keep_compiled_code(quiet: bool) -> None:
+    """Switch the cache of compiled code on; this must come before jax is loaded."""
+    problem = cache.enable()
+    if problem and not quiet:
+        click.echo(f"note: {problem}", err=True)
+
+
+def main(arguments: Sequence[str] | None = None) -> None:
+    """Run the command line and exit; the one door at which every error becomes words and a code."""
+    given = list(sys.argv[1:] if arguments is None else arguments)
+    sys.exit(_run(given))
+
+
+def _run(given: list[str]) -> int:
+    try:
+        return int(cli.main(given, prog_name="gutz", standalone_mode=False) or 0)
+    except click.exceptions.NoArgsIsHelpError as error:
+        click.echo(error.format_message())
+        return 0
+    except click.UsageError as error:
+        where = error.ctx.command_path if error.ctx else "gutz"
+        _say(f"{error.format_message()}\nSee: {where} --help")
+        return 2
+    except (KeyboardInterrupt, click.exceptions.Abort):
+        _say("stopped")
+        return INTERRUPTED
+    except GutzError as error:
+        if "--debug" in given:
+            traceback.print_exc()
+        _say(str(error))
+        return error.exit_code
+    except BrokenPipeError:
+        # The reader of our output has gone; what is still buffered must not raise again at exit.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return 0
+    except Exception as error:
+        if "--debug" in given:
+            traceback.print_exc()
+        _say(_report_internal(error))
+        return INTERNAL_ERROR
+
+
+def _say(words: str) -> None:
+    click.echo(f"gutz: {words}", err=True)
+
+
+def _report_internal(error: Exception) -> str:
+    """Save the traceback in a file of its own, and say where."""
+    kind = type(error).__name__
+    try:
+        handle, name = tempfile.mkstemp(prefix="gutz-error-", suffix=".txt")
+        with os.fdopen(handle, "w", encoding="utf-8") as file:
+            file.write(f"gutz {_version()}\n")
+            traceback.print_exception(error, file=file)
+    except OSError:
+        return f"internal error ({kind}); run again with --debug to see where, and please report it"
+    return f"internal error ({kind}); please report it with the file {name}"
+
+
+if __name__ == "__main__":
+    main()

@@ -1,0 +1,1 @@
+"""The work behind each command of `gutz.cli`: one module per command, each with `run(**options) -> exit code`."""

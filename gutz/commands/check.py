@@ -1,0 +1,68 @@
+"""`gutz check`: judge a file and estimate the work, without computing.
+
+In:  a scan file.
+Out: a short table, or JSON. Loads neither jax nor xarray.
+"""
+
+import math
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from gutz import console
+from gutz.commands.points import load
+from gutz.optics import sentences
+from gutz.scan import schema
+from gutz.scan.plan import Plan, check_physics
+
+SECONDS_PER_POINT = {"product": 5e-4}
+"""Measured on one core of a small cloud machine; other machines differ by a factor of a few."""
+START_SECONDS = 15.0
+"""Loading and compiling, the first time."""
+BASE_BYTES = 600_000_000
+"""Memory of the loaded program before the first point."""
+WORKING_COPIES = 6
+"""A chunk is held about this many times over while it is solved."""
+
+
+def run(file: Path, overrides: Sequence[str], as_json: bool, quiet: bool, debug: bool) -> int:
+    """Check the file and print the estimate; mistakes raise InputError."""
+    source, full = load(file, overrides)
+    check_physics(full)
+    found = estimate(full)
+    remarks = _cautions(full)
+    if as_json:
+        console.write_json({"file": source.name, "sha256": full.spec.sha256(), **found, "remarks": remarks})
+        return 0
+    axes = " x ".join(f"{axis.values.size} {axis.name}" for axis in full.axes) or "a single point"
+    rows = [
+        ("points", f"{full.points:,} ({axes})"),
+        ("chunks", f"{found['chunks']:,} of up to {math.prod(full.chunk):,} points"),
+        ("memory", f"about {console.size(found['memory_bytes'])}"),
+        ("disk", f"at most {console.size(found['disk_bytes'])}"),
+        ("time", f"roughly {console.duration(found['seconds'])} on one core, the first time"),
+    ]
+    console.table((f"{source.name} is fine", "estimate"), rows)
+    for remark in remarks:
+        console.note(f"note: {remark}", quiet)
+    return 0
+
+
+def estimate(full: Plan) -> dict[str, Any]:
+    """Points, chunks, bytes of memory and disk, seconds: rough, from measured costs per point."""
+    size = schema.bytes_per_point(full)
+    return {
+        "points": full.points,
+        "chunks": math.prod(full.chunks),
+        "memory_bytes": BASE_BYTES + WORKING_COPIES * size * math.prod(full.chunk),
+        "disk_bytes": size * full.points,
+        "seconds": START_SECONDS + SECONDS_PER_POINT[full.spec.ansatz.kind] * full.points,
+    }
+
+
+def _cautions(full: Plan) -> list[str]:
+    """What the lattice's corners deserve as a warning."""
+    found = full.lattice([np.unique(axis.values[[0, -1]]) for axis in full.axes])
+    return [] if found is None else [f"Somewhere in this file: {words}" for words in found.cautions]

@@ -1,0 +1,86 @@
+"""`gutz scan`: a whole file, saved and drawn.
+
+In:  a scan file, an output folder.
+Out: the run (`data.zarr`), figures, on wish one netCDF file; on stdout, where they are and how it went.
+"""
+
+import time
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Any
+
+from gutz import console, plots
+from gutz.errors import OutputError
+from gutz.scan import export, paths, runner, store
+from gutz.scan.runner import Outcome
+from gutz.status import SENTENCES
+
+NETCDF = "data.nc"
+
+
+def run(
+    file: Path,
+    overrides: Sequence[str],
+    out: str | None,
+    resume: bool,
+    netcdf: bool,
+    as_json: bool,
+    quiet: bool,
+    force: bool,
+    debug: bool,
+) -> int:
+    """Run the scan; the exit code says whether every point can be trusted, or what stopped it."""
+    start = time.monotonic()
+    with console.progress(file.stem, quiet) as progress:
+        outcome = runner.run(file, out, overrides=overrides, resume=resume, force=force, progress=progress)
+    files = [store.NAME]
+    if not outcome.stopped:
+        files += _draw(outcome.folder)
+        if netcdf:
+            export.write_netcdf(store.open_run(outcome.folder), paths.inside(outcome.folder, NETCDF))
+            files.append(NETCDF)
+    if as_json:
+        console.write_json(_record(outcome, files))
+    else:
+        _print(outcome, files, time.monotonic() - start)
+    return outcome.exit_code
+
+
+def _draw(folder: Path) -> list[str]:
+    """Draw the figures the file asks for; return their names."""
+    dataset = store.open_run(folder)
+    names = dataset.attrs["figures"]
+    made: list[str] = []
+    for name in names:
+        if name not in dataset:
+            continue  # an axis of this name stands in for the variable
+        try:
+            made += [path.name for path in plots.save(plots.draw(dataset, name), paths.inside(folder, name))]
+        except OSError as error:
+            raise OutputError(f"the figure of {name} cannot be written ({(error.strerror or 'disk error').lower()})") from None
+    return made
+
+
+def _record(outcome: Outcome, files: Sequence[str]) -> dict[str, Any]:
+    return {
+        "folder": str(outcome.folder),
+        "files": list(files),
+        "points": outcome.points,
+        "chunks": outcome.chunks,
+        "computed": outcome.computed,
+        "untrusted": outcome.untrusted,
+        "stopped": bool(outcome.stopped),
+        "remarks": {str(bit.name).lower(): count for bit, count in outcome.remarks.items()},
+    }
+
+
+def _print(outcome: Outcome, files: Sequence[str], seconds: float) -> None:
+    """Say how it went and where everything is."""
+    console.say(f"{outcome.points:,} points, {outcome.computed} of {outcome.chunks} chunks computed in {console.duration(seconds)}")
+    for bit, count in outcome.remarks.items():
+        console.say(f"  {count:,} points: {SENTENCES[bit]}")
+    if outcome.stopped:
+        console.say("stopped; what is done is saved: run the same command with --resume to continue")
+    console.say(f"in {outcome.folder}:")
+    for name in files:
+        console.say(f"  {name}")
