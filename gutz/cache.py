@@ -1,4 +1,4 @@
-"""Where compiled code is kept between runs of the command line, so that only the first one waits for the compiler.
+"""Where compiled code is kept between runs, so that only the first one waits for the compiler.
 
 In:  the user's cache folder (platformdirs), the environment.
 Out: environment variables that JAX reads when it is imported, or one sentence on why there is no cache.

@@ -27,10 +27,18 @@ INTERRUPTED = 130
 
 _FILE = click.argument("file", type=click.Path(path_type=Path))
 _SET = click.option(
-    "--set", "overrides", multiple=True, metavar="KEY=VALUE", help="Change one setting: section.key=value. Repeatable."
+    "--set",
+    "overrides",
+    multiple=True,
+    metavar="KEY=VALUE",
+    help="Change one setting: section.key=value. Repeatable.",
 )
 _AT = click.option(
-    "--at", "at", multiple=True, metavar="AXIS=VALUE", help="Choose a point: a value for an axis of the file. Repeatable."
+    "--at",
+    "at",
+    multiple=True,
+    metavar="AXIS=VALUE",
+    help="Choose a point: a value for an axis of the file. Repeatable.",
 )
 _JSON = click.option("--json", "as_json", is_flag=True, help="Write JSON on stdout, and nothing else there.")
 _QUIET = click.option("--quiet", is_flag=True, help="No notes and no progress.")
@@ -68,11 +76,12 @@ def cli() -> None:
 
 
 @cli.command(
+    short_help="Hubbard parameters from laser light and atoms.",
     help=_example(
         "Example: gutz lattice scans/rubidium-cubic.toml\n\n"
         "Hubbard parameters of the file's lattice, against its depth or scattering length.\n\n"
         "With --out, a figure as well (PNG and PDF)."
-    )
+    ),
 )
 @_FILE
 @_SET
@@ -91,11 +100,12 @@ def lattice(**options: Any) -> int:
 
 
 @cli.command(
+    short_help="Solve one point and print everything about it.",
     help=_example(
         "Example: gutz solve scans/rubidium-cubic.toml --at depth=12 --at T=5\n\n"
         "Solve one point, and print everything known about it.\n\n"
         "Axes of the file need a value each; it need not lie on the scan's grid."
-    )
+    ),
 )
 @_FILE
 @_SET
@@ -112,11 +122,12 @@ def solve(**options: Any) -> int:
 
 
 @cli.command(
+    short_help="Solve a whole grid of points, save and draw it.",
     help=_example(
         "Example: gutz scan scans/rubidium-cubic.toml --out rubidium\n\n"
         "Solve every point of the file's axes; save the numbers and figures (PNG and PDF).\n\n"
         "Ctrl-C stops after the chunk at work; the same command with --resume continues."
-    )
+    ),
 )
 @_FILE
 @_SET
@@ -136,10 +147,11 @@ def scan(**options: Any) -> int:
 
 
 @cli.command(
+    short_help="Check a file and estimate the work.",
     help=_example(
         "Example: gutz check scans/rubidium-cubic.toml\n\n"
         "Check a file and estimate the work: points, chunks, memory, disk, time. Computes nothing."
-    )
+    ),
 )
 @_FILE
 @_SET

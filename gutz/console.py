@@ -43,7 +43,7 @@ def table(heads: Sequence[str], rows: Sequence[Sequence[str]]) -> None:
     """Print a table; first column left, the others right."""
     terminal = sys.stdout.isatty()
     console = Console(file=sys.stdout, highlight=False, width=None if terminal else PLAIN_WIDTH)
-    made = Table(box=box.SIMPLE_HEAD if terminal else box.ASCII2, pad_edge=False)
+    made = Table(box=box.SIMPLE_HEAD if terminal else None, pad_edge=False, padding=(0, 1))
     for number, head in enumerate(heads):
         made.add_column(_unmarked(head), justify="left" if number == 0 else "right", overflow="fold")
     for row in rows:

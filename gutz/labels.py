@@ -24,7 +24,7 @@ def place(
 ) -> list[int]:
     """Write a name into every region of `pixels`, shape (row, column), first row at the bottom of the axes.
 
-    words, colours: by label; labels without words stay unnamed. Returns the labels whose regions are too small.
+    words, colours: by label; labels without words stay unnamed. Returns those whose regions are too small.
     """
     failed = []
     for value in np.unique(pixels).tolist():
@@ -56,19 +56,18 @@ def _largest_piece(mask: NDArray[np.bool_]) -> NDArray[np.bool_]:
 
 
 def _write(axes: Axes, region: NDArray[np.bool_], words: str, ink: str) -> bool:
-    """Try sizes from large to small, one line before two, level before upright; True if one fits."""
+    """Try sizes from large to small, level before upright, one line before two; True if one fits."""
     rows, columns = region.shape
-    renderer = FigureCanvasAgg(axes.figure).get_renderer()  # type: ignore[arg-type]
-    depth = ndimage.distance_transform_edt(np.pad(region, 1))[1:-1, 1:-1]
+    renderer = FigureCanvasAgg(axes.figure).get_renderer()  # type: ignore[no-untyped-call,arg-type]
     for size in LABEL_SIZES:
-        for shape in (words, _two_lines(words)):
-            for angle in (0, 90):
+        for angle in (0, 90):
+            for shape in (words, _two_lines(words)):
                 text = axes.text(
                     0, 0, shape, size=size, rotation=angle, color=ink, ha="center", va="center",
                     transform=axes.transAxes, parse_math=False, zorder=6,
                 )  # fmt: skip
                 box = text.get_window_extent(renderer)
-                spot = _spot(region, depth, int(box.height) + 2 * MARGIN, int(box.width) + 2 * MARGIN)
+                spot = _spot(region, int(box.height) + 2 * MARGIN, int(box.width) + 2 * MARGIN)
                 if spot is not None:
                     text.set_position(((spot[1] + 0.5) / columns, (spot[0] + 0.5) / rows))
                     return True
@@ -76,19 +75,20 @@ def _write(axes: Axes, region: NDArray[np.bool_], words: str, ink: str) -> bool:
     return False
 
 
-def _spot(
-    region: NDArray[np.bool_], depth: NDArray[np.float64], height: int, width: int
-) -> tuple[int, int] | None:
-    """The centre, deepest inside the region, of a rectangle that fits into it; None if there is none."""
+def _spot(region: NDArray[np.bool_], height: int, width: int) -> tuple[int, int] | None:
+    """The centre of a rectangle inside the region, well away from where it no longer fits; or None."""
     if height >= region.shape[0] or width >= region.shape[1]:
         return None
-    padded = np.pad(region, ((1, 0), (1, 0))).cumsum(0).cumsum(1)
-    filled = padded[height:, width:] - padded[:-height, width:] - padded[height:, :-width] + padded[:-height, :-width]
+    sums = np.pad(region, ((1, 0), (1, 0))).cumsum(0).cumsum(1)
+    filled = sums[height:, width:] - sums[:-height, width:] - sums[height:, :-width] + sums[:-height, :-width]
     fits = filled == height * width
     if not fits.any():
         return None
-    centred = depth[height // 2 : height // 2 + fits.shape[0], width // 2 : width // 2 + fits.shape[1]]
-    row, column = np.unravel_index(np.where(fits, centred, -1.0).argmax(), fits.shape)
+    room = ndimage.distance_transform_edt(np.pad(fits, 1))[1:-1, 1:-1]
+    # Among the roomy places, the one nearest the middle of the region.
+    roomy = np.argwhere(room >= 0.7 * room.max())
+    middle = np.argwhere(region).mean(0) - (height / 2, width / 2)
+    row, column = roomy[((roomy - middle) ** 2).sum(1).argmin()]
     return int(row) + height // 2, int(column) + width // 2
 
 

@@ -3,13 +3,13 @@
 In:  a dataset as `gutz.scan.open_run` returns it.
 Out: matplotlib `Figure` objects (never pyplot), saved as PNG and PDF by `save`.
 
-The first axis of a scan runs along x, the second along y, a third makes small panels; further axes are held at
-their middle values, which the caption says. Points not to be trusted are hatched, never hidden.
+The first axis of a scan runs along x, the second along y, a third makes small panels; further axes are held
+at their middle values, which the caption says. Points not to be trusted are hatched, never hidden.
 """
 
 import math
 import warnings
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -21,6 +21,7 @@ from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.colors import BoundaryNorm, ListedColormap
 from matplotlib.figure import Figure
 from matplotlib.patches import Patch
+from matplotlib.text import Text
 from numpy.typing import NDArray
 
 from gutz import labels, style
@@ -32,6 +33,9 @@ MOST_PANELS = 4
 """Panels side by side along a third axis."""
 
 _KINDS = [*Phase]
+_WORDS = {int(phase): WORDS[phase] for phase in Phase}
+_COLOURS = {int(phase): colour for phase, colour in style.PHASE_COLOURS.items()}
+_LEGEND_COLUMNS = 3
 _PANEL_WIDTH, _PANEL_HEIGHT = 3.5, 2.9
 
 
@@ -52,11 +56,15 @@ def draw(dataset: xr.Dataset, name: str) -> Figure:
 
 
 def parameters(
-    x: NDArray[np.float64], words: tuple[str, str], columns: Mapping[str, NDArray[np.float64]], unit: str, title: str
+    x: NDArray[np.float64],
+    words: tuple[str, str],
+    columns: Mapping[str, NDArray[np.float64]],
+    unit: str,
+    title: str,
 ) -> Figure:
     """Draw Hubbard parameters against one axis, on a logarithmic scale, each line named at its right end.
 
-    x: axis values, shape (n,); words: name and unit of the axis; columns: energies in `unit`, shape (n,) each.
+    x: axis values, shape (n,); words: name and unit of the axis; columns: energies in `unit`, (n,) each.
     """
     with matplotlib.rc_context(style.RC):
         figure = _new_figure(1, 1, width=6.4)
@@ -64,10 +72,11 @@ def parameters(
         _frame(panel, x, None)
         panel.set_yscale("log")
         ends: list[tuple[float, str, str]] = []
-        for number, (name, values) in enumerate(columns.items()):
-            colour = style.LINE_COLOURS[number % 4]
+        for name, values in _merged(columns).items():
+            kind = "t" if name[0] == "t" else name[:3] if name[:3] in ("U12", "gap") else "U"
+            colour = style.LINE_COLOURS[("t", "U", "U12", "gap").index(kind)]
             size = np.abs(values)
-            panel.plot(x, size, color=colour, ls=style.LINE_STYLES[number // 4 % 4], lw=1.8)
+            panel.plot(x, size, color=colour, ls="--" if name[:2] in ("t2", "U2") else "-", lw=1.8)
             ends.append((float(size[np.argmax(x)]), f"|{name}|" if np.any(values < 0) else name, colour))
         panel.set_xlabel(style.quantity(*words), parse_math=False)
         panel.set_ylabel(style.quantity("Energy", unit), parse_math=False)
@@ -80,10 +89,15 @@ def parameters(
 def save(figure: Figure, path: Path) -> list[Path]:
     """Save as PNG and PDF beside each other, whole or not at all; returns both paths. No dates inside."""
     made = []
+    _settle(figure)
+    figure.set_layout_engine("none")
     with matplotlib.rc_context(style.RC), warnings.catch_warnings():
         # Titles may use scripts the font lacks; boxes in their place are better than no figure.
         warnings.filterwarnings("ignore", message="Glyph .* missing", category=UserWarning)
-        for ending, metadata in ((".png", {"Software": None}), (".pdf", {"CreationDate": None, "Creator": "gutz"})):
+        for ending, metadata in (
+            (".png", {"Software": None}),
+            (".pdf", {"CreationDate": None, "Creator": "gutz"}),
+        ):
             final = path.with_name(path.name + ending)
             temporary = path.with_name(path.name + ending + ".partial")
             figure.savefig(temporary, format=ending[1:], dpi=style.DPI, metadata=metadata)
@@ -120,11 +134,11 @@ def _maps(dataset: xr.Dataset, axes: list[str], name: str) -> Figure:
                 panel.set_ylabel(_axis_words(dataset, axes[1]), parse_math=False)
         if name != "phase":
             bar = figure.colorbar(drawn[-1], ax=list(grid[i]), pad=0.02, aspect=25)
-            bar.outline.set_visible(False)  # type: ignore[operator]
+            bar.outline.set_visible(False)
             bar.set_label(_axis_words(dataset, name), parse_math=False)
-    _caption(figure, dataset, held)
+    caption = _caption(figure, dataset, held)
     if name == "phase":
-        _name_regions(figure, grid, columns, axes, name)
+        _name_regions(figure, grid, columns, axes, caption)
     return figure
 
 
@@ -140,7 +154,7 @@ def _lines(dataset: xr.Dataset, axis: str, name: str) -> Figure:
         y = dataset[shown].isel(selection).values
         line = {"color": style.LINE_COLOURS[number % 4], "ls": style.LINE_STYLES[number % 4], "lw": 1.8}
         panel.plot(x, y, label=component or None, **line)
-        bad = (dataset["status"].values & int(UNTRUSTED)) != 0
+        bad = _untrusted(dataset)
         panel.plot(x[bad], y[bad], "x", color=line["color"], ms=4)
         ends.append(component)
     if any(ends):
@@ -151,25 +165,48 @@ def _lines(dataset: xr.Dataset, axis: str, name: str) -> Figure:
     _fill_phases(strip, x, np.array([0.0, 1.0]), np.repeat(codes, 2, axis=0))
     strip.set_ylim(0, 1)
     strip.set_axis_off()
-    _caption(figure, dataset, "")
-    _settle(figure)
-    across, _ = labels.pixel_grid(strip)
-    height = max(1, int(strip.get_window_extent().height))
-    pixels = np.repeat(codes[:, _cells(x, across)], height, axis=0)
-    small = labels.place(strip, pixels, {int(p): WORDS[p] for p in Phase}, _colours())
-    _legend(figure, small)
+    caption = _caption(figure, dataset, "")
+
+    def attempt() -> list[int]:
+        across, _ = labels.pixel_grid(strip)
+        height = max(1, int(strip.get_window_extent().height))
+        return labels.place(strip, np.repeat(codes[:, _cells(x, across)], height, axis=0), _WORDS, _COLOURS)
+
+    _name_with_legend(figure, [strip], caption, attempt)
     return figure
 
 
 def _name_ends(panel: Axes, ends: list[tuple[float, str, str]]) -> None:
-    """Write names beside the right ends of lines, from the lowest up, pushed apart where lines meet."""
-    height = panel.get_window_extent().height / (panel.figure.dpi / 72)
-    needed = 1.25 * style.TEXT_SIZE / height
-    last = -needed
-    for value, name, colour in sorted(end for end in ends if end[0] > 0):
-        _, place = panel.transAxes.inverted().transform(panel.transData.transform((panel.get_xlim()[1], value)))
-        last = max(float(place), last + needed)
-        panel.text(1.015, last, name, color=colour, va="center", transform=panel.transAxes, parse_math=False)
+    """Write names beside the right ends of lines, from the lowest up, spread where lines meet."""
+    ends = sorted(end for end in ends if end[0] > 0)
+    needed = 1.3 * style.TEXT_SIZE / (panel.get_window_extent().height / (panel.figure.dpi / 72))
+    edge = panel.get_xlim()[1]
+    true = [
+        float(panel.transAxes.inverted().transform(panel.transData.transform((edge, e[0])))[1]) for e in ends
+    ]
+    up, down = true.copy(), true.copy()
+    for i in range(1, len(true)):
+        up[i] = max(up[i], up[i - 1] + needed)
+        down[-1 - i] = min(down[-1 - i], down[-i] - needed)
+    # Both rows keep the distance needed, so their mean does too, and it stays around the true places.
+    for (_, name, colour), a, b in zip(ends, up, down, strict=True):
+        panel.text(
+            1.015, (a + b) / 2, name, color=colour, va="center", transform=panel.transAxes, parse_math=False
+        )
+
+
+def _merged(columns: Mapping[str, NDArray[np.float64]]) -> dict[str, NDArray[np.float64]]:
+    """Columns that are equal share one line and both names."""
+    merged: dict[str, NDArray[np.float64]] = {}
+    for name, values in columns.items():
+        same = next(
+            (other for other, v in merged.items() if np.allclose(v, values, rtol=1e-9, atol=0.0)), None
+        )
+        if same is None:
+            merged[name] = values
+        else:
+            merged[f"{same}, {name}"] = merged.pop(same)
+    return merged
 
 
 def _new_figure(columns: int, rows: int, width: float | None = None) -> Figure:
@@ -196,7 +233,9 @@ def _slices(dataset: xr.Dataset, axis: str) -> list[tuple[xr.Dataset, str]]:
     """A few values of an axis, evenly chosen, with words for each."""
     size = dataset.sizes[axis]
     chosen = np.unique(np.linspace(0, size - 1, min(size, MOST_PANELS)).round().astype(int))
-    return [(dataset.isel({axis: int(i)}), _at(dataset, axis, float(dataset[axis].values[i]))) for i in chosen]
+    return [
+        (dataset.isel({axis: int(i)}), _at(dataset, axis, float(dataset[axis].values[i]))) for i in chosen
+    ]
 
 
 def _at(dataset: xr.Dataset, axis: str, value: float) -> str:
@@ -205,16 +244,22 @@ def _at(dataset: xr.Dataset, axis: str, value: float) -> str:
 
 
 def _components(dataset: xr.Dataset, name: str) -> list[tuple[dict[str, int], str]]:
-    """The components of a variable worth a panel: per species or pair of species, along x; equal ones once."""
+    """The components of a variable worth a panel: per species or pair of them, along x; equal ones once."""
     array = dataset[name]
     along = {"direction": 0} if "direction" in array.dims else {}
     count = array.sizes.get("species", 1)
     if "species" not in array.dims or count == 1:
-        fixed = {dim: 0 for dim in ("species", "species_") if dim in array.dims}
+        fixed: dict[str, int] = {dim: 0 for dim in ("species", "species_") if dim in array.dims}
         return [({**along, **fixed}, "")]
     if "species_" in array.dims:
         pairs = [(0, 0), (1, 1), (0, 1)]
-        found = [({**along, "species": a, "species_": b}, f"species {a + 1} and {b + 1}" if a != b else f"species {a + 1}") for a, b in pairs]
+        found = [
+            (
+                {**along, "species": a, "species_": b},
+                f"species {a + 1} and {b + 1}" if a != b else f"species {a + 1}",
+            )
+            for a, b in pairs
+        ]
     else:
         found = [({**along, "species": a}, f"species {a + 1}") for a in range(count)]
     first, second = (array.isel(found[k][0]).values for k in (0, 1))
@@ -241,7 +286,11 @@ def _frame(panel: Axes, x: NDArray[np.float64], y: NDArray[np.float64] | None) -
 
 def _is_log(values: NDArray[np.float64]) -> bool:
     """True for values in a geometric row over more than half a decade."""
-    if values.size < 3 or np.any(values <= 0) or not 0.3 > min(values[0], values[-1]) / max(values[0], values[-1]):
+    if (
+        values.size < 3
+        or np.any(values <= 0)
+        or not min(values[0], values[-1]) / max(values[0], values[-1]) < 0.3
+    ):
         return False
     return bool(np.allclose(np.diff(np.log(values)), np.log(values[1] / values[0]), rtol=1e-6))
 
@@ -262,81 +311,119 @@ def _cells(values: NDArray[np.float64], at: NDArray[np.float64]) -> NDArray[np.i
     return np.clip(np.searchsorted(edges, at) - 1, 0, values.size - 1)
 
 
-def _fill_phases(panel: Axes, x: NDArray[np.float64], y: NDArray[np.float64], codes: NDArray[np.integer]) -> None:
+def _fill_phases(
+    panel: Axes, x: NDArray[np.float64], y: NDArray[np.float64], codes: NDArray[np.integer]
+) -> None:
     colours = ListedColormap([style.PHASE_COLOURS[phase] for phase in _KINDS])
     norm = BoundaryNorm(np.arange(len(_KINDS) + 1) - 0.5 + int(_KINDS[0]), len(_KINDS))
     panel.pcolormesh(_edges(x), _edges(y), codes, cmap=colours, norm=norm, rasterized=True)
 
 
 def _fill_numbers(
-    panel: Axes, x: NDArray[np.float64], y: NDArray[np.float64], values: NDArray[np.float64], everywhere: NDArray[np.float64]
+    panel: Axes,
+    x: NDArray[np.float64],
+    y: NDArray[np.float64],
+    values: NDArray[np.float64],
+    everywhere: NDArray[np.float64],
 ) -> Any:
     """A map of numbers; panels of one row share their scale."""
     finite = everywhere[np.isfinite(everywhere)]
     low, high = (float(finite.min()), float(finite.max())) if finite.size else (0.0, 1.0)
     if low < -1e-12 * max(1.0, abs(high)) and high > 0:
         top = max(-low, high)
-        scale = {"cmap": style.BALANCE, "vmin": -top, "vmax": top}
+        scale: dict[str, Any] = {"cmap": style.BALANCE, "vmin": -top, "vmax": top}
     else:
         scale = {"cmap": style.RAMP, "vmin": low, "vmax": high if high > low else low + 1.0}
     panel.set_facecolor("#efece6")
     return panel.pcolormesh(_edges(x), _edges(y), np.ma.masked_invalid(values), rasterized=True, **scale)
 
 
-def _hatch(panel: Axes, x: NDArray[np.float64], y: NDArray[np.float64], part: xr.Dataset, axes: list[str]) -> None:
-    """Hatch points not to be trusted; collapse names itself."""
-    status = part["status"].transpose(axes[1], axes[0]).values
-    collapsed = part["phase"].transpose(axes[1], axes[0]).values == int(Phase.COLLAPSE)
-    bad = (status != -1) & ((status & int(UNTRUSTED)) != 0) & ~collapsed
+def _hatch(
+    panel: Axes, x: NDArray[np.float64], y: NDArray[np.float64], part: xr.Dataset, axes: list[str]
+) -> None:
+    """Hatch points not to be trusted."""
+    bad = _untrusted(part.transpose(axes[1], axes[0], ...))
     if bad.any():
-        # Twice each cell's value at its two edges makes the contour follow the cells instead of their centres.
-        rows, columns = np.repeat(np.repeat(bad, 2, axis=0), 2, axis=1).shape
+        # Each cell's value at both its edges makes the contour follow the cells and not their centres.
+        doubled = np.repeat(np.repeat(bad, 2, axis=0), 2, axis=1).astype(float)
+        rows, columns = doubled.shape
         edges_x, edges_y = (np.repeat(_edges(v), 2)[1:-1] for v in (x, y))
-        shift_x, shift_y = (np.tile([1e-9, -1e-9], n // 2) * np.ptp(e) for n, e in ((columns, edges_x), (rows, edges_y)))
+        shift_x, shift_y = (
+            np.tile([1e-9, -1e-9], n // 2) * np.ptp(e) for n, e in ((columns, edges_x), (rows, edges_y))
+        )
         panel.contourf(
-            edges_x + shift_x, edges_y + shift_y, np.repeat(np.repeat(bad, 2, axis=0), 2, axis=1).astype(float),
+            edges_x + shift_x, edges_y + shift_y, doubled,
             levels=[0.5, 1.5], colors="none", hatches=[style.HATCH],
         )  # fmt: skip
 
 
+def _untrusted(part: xr.Dataset) -> NDArray[np.bool_]:
+    """Points to be marked: computed, not to be trusted, and not collapsed (a region that names itself)."""
+    status, phase = part["status"].values, part["phase"].values
+    return np.asarray((status != -1) & ((status & int(UNTRUSTED)) != 0) & (phase != int(Phase.COLLAPSE)))
+
+
 def _name_regions(
-    figure: Figure, grid: NDArray[Any], columns: list[tuple[xr.Dataset, str]], axes: list[str], name: str
+    figure: Figure, grid: NDArray[Any], columns: list[tuple[xr.Dataset, str]], axes: list[str], caption: Text
 ) -> None:
     """Write the phases' names into their regions; those too small for words go into a legend."""
-    _settle(figure)
-    small: set[int] = set()
-    for j, (part, _) in enumerate(columns):
-        panel = grid[0, j]
-        across, up = labels.pixel_grid(panel)
-        codes = part[name].transpose(axes[1], axes[0]).values
-        pixels = codes[np.ix_(_cells(part[axes[1]].values, up), _cells(part[axes[0]].values, across))]
-        small |= set(labels.place(panel, pixels, {int(p): WORDS[p] for p in Phase}, _colours()))
-    _legend(figure, sorted(small))
+
+    def attempt() -> list[int]:
+        small: set[int] = set()
+        for j, (part, _) in enumerate(columns):
+            panel = grid[0, j]
+            across, up = labels.pixel_grid(panel)
+            codes = part["phase"].transpose(axes[1], axes[0]).values
+            pixels = codes[np.ix_(_cells(part[axes[1]].values, up), _cells(part[axes[0]].values, across))]
+            small |= set(labels.place(panel, pixels, _WORDS, _COLOURS))
+        return sorted(small)
+
+    _name_with_legend(figure, [*grid[0]], caption, attempt)
 
 
-def _colours() -> dict[int, str]:
-    return {int(phase): colour for phase, colour in style.PHASE_COLOURS.items()}
+def _name_with_legend(
+    figure: Figure, panels: Sequence[Axes], caption: Text, attempt: Callable[[], list[int]]
+) -> None:
+    """Place names; where some need a legend, make room for it above the caption and place again."""
+    words, rows = caption.get_text(), 0
+    while True:
+        _settle(figure)
+        small = attempt()
+        needed = -(-len(small) // _LEGEND_COLUMNS)
+        if needed <= rows:
+            break
+        for text in [text for panel in panels for text in panel.texts]:
+            text.remove()
+        rows = needed
+        caption.set_text("\n" * 2 * rows + words)
+    if small:
+        patches = [
+            Patch(facecolor=_COLOURS[code], edgecolor=style.INK, lw=0.5, label=_WORDS[code]) for code in small
+        ]
+        top = figure.transFigure.inverted().transform((0, caption.get_window_extent().y1))[1]
+        legend = figure.legend(
+            handles=patches, loc="upper left", bbox_to_anchor=(0.02, float(top)), ncols=_LEGEND_COLUMNS,
+            frameon=False, fontsize=style.SMALL_SIZE + 0.5, borderaxespad=0.0, borderpad=0.0,
+        )  # fmt: skip
+        legend.set_in_layout(False)
 
 
-def _legend(figure: Figure, codes: Sequence[int]) -> None:
-    """A legend under the panels for regions without room for their name."""
-    if codes:
-        patches = [Patch(facecolor=style.PHASE_COLOURS[Phase(c)], edgecolor=style.INK, lw=0.5, label=WORDS[Phase(c)]) for c in codes]
-        figure.legend(handles=patches, loc="outside lower left", ncols=3, frameon=False, fontsize=style.SMALL_SIZE + 0.5)
-
-
-def _caption(figure: Figure, dataset: xr.Dataset, held: str) -> None:
-    """Title, and under it in small print what the picture rests on."""
+def _caption(figure: Figure, dataset: xr.Dataset, held: str) -> Text:
+    """Title above, and below in small print what the picture rests on; returns the latter."""
     attributes = dataset.attrs
     facts = [f"{attributes.get('ansatz', 'product')} ansatz", f"{attributes.get('dim', 3)}D"]
     if held:
         facts.append(held)
     status = dataset["status"].values
-    if np.any((status != -1) & ((status & int(UNTRUSTED)) != 0)):
+    if np.any(_untrusted(dataset)):
         facts.append("hatched or crossed: not to be trusted")
     if np.any(status == -1):
         facts.append(f"{int(np.count_nonzero(status == -1))} points not computed yet")
-    wide = max(40, math.floor(figure.get_figwidth() * 13))
+    wide = max(40, math.floor(figure.get_figwidth() * 12))
     title = style.clean(str(attributes.get("title", "")), wide)
+    if title:
+        figure.suptitle(title, x=0.02, ha="left", size=style.TITLE_SIZE, parse_math=False)
     small = style.clean(", ".join(facts), math.floor(wide * 1.5))
-    figure.suptitle(title + "\n" + small if title else small, x=0.02, ha="left", size=style.TITLE_SIZE, parse_math=False)
+    return figure.supxlabel(
+        small, x=0.02, ha="left", size=style.SMALL_SIZE, color=style.PALE_INK, parse_math=False
+    )

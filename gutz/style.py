@@ -4,9 +4,11 @@ In:  nothing.
 Out: constants and small functions; the one place to change a colour.
 
 The phase colours were chosen here to differ in lightness as well as hue, so that they stay apart for
-colour-blind readers and in grey print; every region is named in words as well. Maps of numbers run evenly from
-light to dark.
+colour-blind readers and in grey print; every region is named in words as well. Maps of numbers run evenly
+from light to dark.
 """
+
+from typing import Any
 
 from matplotlib.colors import Colormap, LinearSegmentedColormap
 
@@ -53,7 +55,7 @@ BALANCE: Colormap = LinearSegmentedColormap.from_list(
 )
 """Brown below zero, blue above, for numbers of both signs."""
 
-RC = {
+RC: dict[Any, Any] = {
     "font.family": FONT,
     "font.size": TEXT_SIZE,
     "axes.edgecolor": INK,

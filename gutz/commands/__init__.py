@@ -1,1 +1,1 @@
-"""The work behind each command of `gutz.cli`: one module per command, each with `run(**options) -> exit code`."""
+"""The work behind the commands of `gutz.cli`: a module for each, with `run(**options) -> exit code`."""

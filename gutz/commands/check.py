@@ -13,7 +13,6 @@ import numpy as np
 
 from gutz import console
 from gutz.commands.points import load
-from gutz.optics import sentences
 from gutz.scan import schema
 from gutz.scan.plan import Plan, check_physics
 

@@ -59,18 +59,23 @@ def _choose(full: Plan, at: dict[str, float]) -> tuple[Axis | None, list[Any]]:
     names = [a.name for a in full.axes]
     for name in at:
         if name not in names:
-            raise InputError(f"--at {name}: is not an axis of this file; its axes are {', '.join(names) or 'none'}")
+            raise InputError(
+                f"--at {name}: is not an axis of this file; its axes are {', '.join(names) or 'none'}"
+            )
     if len(along) > 1:
         held = " ".join(f"--at {a.name}={a.values[0]:g}" for a in along[1:])
-        raise InputError(f"the file has {len(along)} lattice axes; keep one and fix the others, for example {held}")
+        raise InputError(
+            f"the file has {len(along)} lattice axes; keep one and fix the others, for example {held}"
+        )
     picked = [
-        a.values if a in along else np.array([at[a.name]]) if a.name in at else a.values[:1] for a in full.axes
+        a.values if a in along else np.array([at[a.name]]) if a.name in at else a.values[:1]
+        for a in full.axes
     ]
     return (along[0] if along else None), picked
 
 
 def _columns(full: Plan, found: HubbardParameters, unit: str) -> dict[str, Any]:
-    """Arrays by short name: hoppings per species (and direction where they differ), interactions, smallest gap."""
+    """Arrays by short name: hoppings (per direction where they differ), interactions, smallest gap."""
     energies = found.energies_in(unit)
     columns: dict[str, Any] = {}
     for i in range(full.spec.species):
@@ -88,10 +93,22 @@ def _columns(full: Plan, found: HubbardParameters, unit: str) -> dict[str, Any]:
     return {name: np.broadcast_to(np.ravel(values), (length,)) for name, values in columns.items()}
 
 
-def _record(axis: Axis | None, columns: dict[str, Any], unit: str, found: HubbardParameters) -> dict[str, Any]:
-    record: dict[str, Any] = {"unit": unit, "recoil_hz": found.recoil_hz, "columns": columns, "remarks": found.cautions}
+def _record(
+    axis: Axis | None, columns: dict[str, Any], unit: str, found: HubbardParameters
+) -> dict[str, Any]:
+    record: dict[str, Any] = {
+        "unit": unit,
+        "recoil_hz": found.recoil_hz,
+        "columns": columns,
+        "remarks": found.cautions,
+    }
     if axis is not None:
-        record["axis"] = {"name": axis.name, "parameter": axis.target.path, "units": axis.unit, "values": axis.values}
+        record["axis"] = {
+            "name": axis.name,
+            "parameter": axis.target.path,
+            "units": axis.unit,
+            "values": axis.values,
+        }
     return record
 
 
@@ -101,13 +118,19 @@ def _print(axis: Axis | None, columns: dict[str, Any], unit: str) -> None:
     ratio = columns["U1"] / next(iter(columns.values()))
     heads = [f"{axis.name} ({axis.unit})" if axis else "", *(f"{name} ({unit})" for name in columns), "U1/t1"]
     rows = [
-        [console.number(float(axis.values[i])) if axis else "", *(console.number(float(v[i])) for v in columns.values()), console.number(float(ratio[i]))]
+        [
+            console.number(float(axis.values[i])) if axis else "",
+            *(console.number(float(v[i])) for v in columns.values()),
+            console.number(float(ratio[i])),
+        ]
         for i in chosen
     ]
     console.table(heads, rows)
 
 
-def _figure(out: str, force: bool, axis: Axis | None, columns: dict[str, Any], unit: str, title: str, quiet: bool) -> None:
+def _figure(
+    out: str, force: bool, axis: Axis | None, columns: dict[str, Any], unit: str, title: str, quiet: bool
+) -> None:
     """Draw the columns against the axis."""
     if axis is None:
         raise InputError("--out needs an axis over the lattice in the file to draw along")

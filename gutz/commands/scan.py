@@ -57,7 +57,9 @@ def _draw(folder: Path) -> list[str]:
         try:
             made += [path.name for path in plots.save(plots.draw(dataset, name), paths.inside(folder, name))]
         except OSError as error:
-            raise OutputError(f"the figure of {name} cannot be written ({(error.strerror or 'disk error').lower()})") from None
+            raise OutputError(
+                f"the figure of {name} cannot be written ({(error.strerror or 'disk error').lower()})"
+            ) from None
     return made
 
 
@@ -76,7 +78,10 @@ def _record(outcome: Outcome, files: Sequence[str]) -> dict[str, Any]:
 
 def _print(outcome: Outcome, files: Sequence[str], seconds: float) -> None:
     """Say how it went and where everything is."""
-    console.say(f"{outcome.points:,} points, {outcome.computed} of {outcome.chunks} chunks computed in {console.duration(seconds)}")
+    console.say(
+        f"{outcome.points:,} points, {outcome.computed} of {outcome.chunks} chunks computed "
+        f"in {console.duration(seconds)}"
+    )
     for bit, count in outcome.remarks.items():
         console.say(f"  {count:,} points: {SENTENCES[bit]}")
     if outcome.stopped:

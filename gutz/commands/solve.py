@@ -27,7 +27,10 @@ def run(
     _, full = load(file, overrides)
     point = choose(full, values(at))
     check_physics(point)
-    found = {name: np.asarray(v)[(0,) * len(point.axes)] for name, v in compute_chunk(point, (0,) * len(point.axes)).items()}
+    found = {
+        name: np.asarray(v)[(0,) * len(point.axes)]
+        for name, v in compute_chunk(point, (0,) * len(point.axes)).items()
+    }
     status = int(found["status"])
     if as_json:
         console.write_json(_record(point, found))
@@ -53,7 +56,10 @@ def _record(point: Plan, found: dict[str, Any]) -> dict[str, Any]:
 
 def _print(point: Plan, found: dict[str, Any]) -> None:
     """Print the point as a table: one row per quantity, entries in reading order."""
-    where = ", ".join(f"{axis.name} = {console.number(float(axis.values[0]))} {_unit(axis.unit)}".strip() for axis in point.axes)
+    where = ", ".join(
+        f"{axis.name} = {console.number(float(axis.values[0]))} {_unit(axis.unit)}".strip()
+        for axis in point.axes
+    )
     rows = []
     for name, field in schema.layout(point).items():
         if name in ("phase", "status", "cautions"):

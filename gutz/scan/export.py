@@ -6,7 +6,7 @@ Out: the file, whole or not at all: written beside its final name, synced, renam
 """
 
 from pathlib import Path
-from typing import Any
+from typing import Any, Final
 
 import xarray as xr
 
@@ -14,7 +14,7 @@ from gutz.errors import DataError, OutputError
 from gutz.scan.paths import replace_durably
 from gutz.scan.schema import to_attributes
 
-ENGINE = "h5netcdf"
+ENGINE: Final = "h5netcdf"
 
 
 def write_netcdf(dataset: xr.Dataset, path: Path) -> None:
@@ -24,13 +24,15 @@ def write_netcdf(dataset: xr.Dataset, path: Path) -> None:
     for array in clean.variables.values():
         array.attrs = to_attributes(array.attrs)
         array.encoding = {}
-    encoding = {name: _encoding(array) for name, array in clean.variables.items()}
+    encoding: dict[Any, dict[str, Any]] = {name: _encoding(array) for name, array in clean.variables.items()}
     temporary = path.with_name(path.name + ".partial")
     try:
         clean.to_netcdf(temporary, engine=ENGINE, format="NETCDF4", encoding=encoding)
         replace_durably(temporary, path)
     except OSError as error:
-        raise OutputError(f"{path.name} cannot be written ({(error.strerror or 'disk error').lower()})") from None
+        raise OutputError(
+            f"{path.name} cannot be written ({(error.strerror or 'disk error').lower()})"
+        ) from None
     finally:
         temporary.unlink(missing_ok=True)
 
@@ -46,7 +48,7 @@ def read_netcdf(path: Path) -> xr.Dataset:
         raise DataError(f"{path.name} cannot be read ({str(error).splitlines()[0][:100]})") from None
 
 
-def _encoding(array: Any) -> dict[str, Any]:
+def _encoding(array: xr.Variable) -> dict[str, Any]:
     """Checksum and light compression; scalars and empty arrays have no chunks to put them on."""
     if array.ndim == 0 or array.size == 0 or array.dtype.kind not in "iuf":
         return {"_FillValue": None} if array.dtype.kind in "iuf" else {}

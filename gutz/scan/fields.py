@@ -1,4 +1,4 @@
-"""What a single value in a scan file may be: numbers, lists per species or direction, quantities, short texts.
+"""What a single value in a scan file may be: a number, a list per species, a quantity, a short text.
 
 In:  a raw TOML value.
 Out: a plain Python value (float, tuple, `Energy`, str), or a ValueError whose text completes the sentence
@@ -32,7 +32,7 @@ class Energy(NamedTuple):
 
 
 class Beam(NamedTuple):
-    """What confines one axis: a lattice depth in recoil energies (unit "E_R") or a frequency in Hz (unit "Hz")."""
+    """What confines one axis: a lattice depth (unit "E_R", recoil energies) or a frequency (unit "Hz")."""
 
     value: float
     unit: str
@@ -87,7 +87,7 @@ def per_species(single: Callable[[Any], Any]) -> Callable[[Any], Any]:
 
 
 def per_direction(single: Callable[[Any], Any]) -> Callable[[Any], Any]:
-    """Return a converter for one value, one per species, or [[x, y, z], [x, y, z]] per species and direction."""
+    """Return a converter for one value, one per species, or [[x, y, z], [x, y, z]] for both."""
 
     def directions(value: Any) -> Any:
         if not isinstance(value, list):
@@ -155,7 +155,9 @@ def length(value: Any) -> float:
     try:
         return parse_quantity(value, "length", "")
     except InputError:
-        raise ValueError(f"must be a number and one of the units {', '.join(KINDS['length'].units)}") from None
+        raise ValueError(
+            f"must be a number and one of the units {', '.join(KINDS['length'].units)}"
+        ) from None
 
 
 def text(value: Any) -> str:
@@ -184,7 +186,9 @@ def several_of(*words: str) -> Callable[[Any], tuple[str, ...]]:
             raise ValueError(f"must be a list of {_or(words)}")
         for part in value:
             if part not in words:
-                raise ValueError(f"holds {shown(part)}; it must be a list of {_or(words)}{suggestion(part, words)}")
+                raise ValueError(
+                    f"holds {shown(part)}; it must be a list of {_or(words)}{suggestion(part, words)}"
+                )
         if len(set(value)) < len(value):
             raise ValueError("must not name anything twice")
         return tuple(value)

@@ -1,6 +1,6 @@
 """Which parameters an axis can run over, how they are addressed, and how they are labelled.
 
-In:  a dotted path such as "mixture.T", "mixture.mu.2" (second species) or "lattice.depth.xy" (two directions).
+In:  a dotted path such as "mixture.T", "mixture.mu.2" (second species), "lattice.depth.xy" (two directions).
 Out: `Target`: the parameter, and the species and directions it touches.
 """
 

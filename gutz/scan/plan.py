@@ -1,4 +1,4 @@
-"""What a checked scan file asks to compute: the grid, its chunks, and the Hubbard parameters of any part of it.
+"""What a checked scan file asks to compute: the grid, its chunks, the Hubbard parameters of any part of it.
 
 In:  a `Spec`.
 Out: `Plan`: axes with their values, chunks of bounded size, parameters of chosen points as numpy arrays,
@@ -38,7 +38,7 @@ CHECKED_POINTS = 200_000
 
 @dataclass(frozen=True, eq=False)
 class Axis:
-    """One axis: its name, what it sets, the unit of its values, words for people, and the values, shape (n,)."""
+    """One axis: name, what it sets, unit of its values, words for people, and the values, shape (n,)."""
 
     name: str
     target: Target
@@ -72,7 +72,7 @@ class Plan:
 
     @property
     def energy_unit(self) -> str:
-        """The unit of every stored energy: the label of [mixture], or the recoil energy of the first species."""
+        """The unit of every stored energy: the label of [mixture], or E_R of the first species."""
         return "E_R" if self.spec.lattice else self.spec.mixture.unit
 
     def indices(self) -> Iterator[tuple[int, ...]]:
@@ -104,7 +104,7 @@ class Plan:
     def settings(self, picked: Sequence[Array], found: HubbardParameters | None) -> dict[str, Any]:
         """Parameters at the outer product of axis values, ready for `gutz.Mixture(**settings)`.
 
-        picked: one array of values per axis; found: `lattice(picked)`. Arrays broadcast to one dimension per axis.
+        picked: one array of values per axis; found: `lattice(picked)`. Arrays have a dimension per axis.
         Raises InputError where a parameter is incomplete.
         """
         return _settings(self.spec, self._grids(picked), found)
@@ -131,11 +131,17 @@ def at(full: Plan, values: Mapping[str, float]) -> Plan:
     names = [axis.name for axis in full.axes]
     for name in values:
         if name not in names:
-            raise InputError(f"--at {name}: is not an axis of this file; its axes are {', '.join(names) or 'none'}")
+            raise InputError(
+                f"--at {name}: is not an axis of this file; its axes are {', '.join(names) or 'none'}"
+            )
     missing = [name for name in names if name not in values]
     if missing:
-        example = " ".join(f"--at {axis.name}={axis.values[0]:g}" for axis in full.axes if axis.name in missing)
-        raise InputError(f"the axes {', '.join(missing)} need a value each to choose one point: add {example}")
+        example = " ".join(
+            f"--at {axis.name}={axis.values[0]:g}" for axis in full.axes if axis.name in missing
+        )
+        raise InputError(
+            f"the axes {', '.join(missing)} need a value each to choose one point: add {example}"
+        )
     axes = []
     for axis in full.axes:
         value, lowest = values[axis.name], axis.target.parameter.lowest
@@ -174,7 +180,9 @@ def check_physics(plan: Plan) -> None:
     if found["n_max"] is not None and found["filling"] is not None:
         highest = max(float(np.max(values)) for values in found["filling"])
         if highest >= found["n_max"]:
-            raise InputError(f"mixture.filling reaches {highest:g}; it must stay below n_max = {found['n_max']}")
+            raise InputError(
+                f"mixture.filling reaches {highest:g}; it must stay below n_max = {found['n_max']}"
+            )
     if spec.species == 2:
         U = np.stack(np.broadcast_arrays(*found["U"]), axis=-1)
         limits.check_not_all_collapsed(U, np.asarray(found["U12"]), found["n_max"])
@@ -218,7 +226,7 @@ def _axis(name: str, section: AxisSection, spec: Spec) -> Axis:
 
 
 def _settings(spec: Spec, grids: list[tuple[Axis, Array]], found: HubbardParameters | None) -> dict[str, Any]:
-    """Lay axes over the file's values, convert every energy to the run's unit, and add the lattice's parameters."""
+    """Lay axes over the file's values, convert energies to the run's unit, add the lattice's parameters."""
     mixture, species, dim = spec.mixture, spec.species, spec.dim
     unit = _EnergyUnits(found)
 
@@ -260,14 +268,13 @@ def _settings(spec: Spec, grids: list[tuple[Axis, Array]], found: HubbardParamet
     }
     if found is not None:
         energies = found.energies_in("E_R")
-        settings["t"] = tuple(
-            tuple(energies["t"][..., i, d] for d in range(dim)) for i in range(species)
-        )
+        settings["t"] = tuple(tuple(energies["t"][..., i, d] for d in range(dim)) for i in range(species))
         settings["U"] = tuple(energies["U"][..., i] for i in range(species))
         settings["U12"] = energies.get("U12", 0.0)
     else:
         settings["t"] = tuple(
-            tuple(_hopping(mixture.t, swept("mixture.t", i, d), i, d) for d in range(dim)) for i in range(species)
+            tuple(_hopping(mixture.t, swept("mixture.t", i, d), i, d) for d in range(dim))
+            for i in range(species)
         )
         settings["U"] = each("U")
         settings["U12"] = single("U12")
@@ -343,7 +350,9 @@ def _lattice(section: LatticeSection, species: int, grids: list[tuple[Axis, Arra
         parts = [beam(i, direction) for i in range(1 if section.same_light else species)]
         kinds = {unit for _, unit in parts}
         if len(kinds) > 1:
-            raise InputError("lattice.depth must be a depth or a frequency for both species alike along each axis")
+            raise InputError(
+                "lattice.depth must be a depth or a frequency for both species alike along each axis"
+            )
         values = parts[0][0] if len(parts) == 1 else tuple(value for value, _ in parts)
         axes.append(StandingWave(values) if kinds == {"E_R"} else Harmonic(values))
     return OpticalLattice(

@@ -3,8 +3,8 @@
 In:  a scan file (or its text, checked), an output folder.
 Out: `Outcome`, and the run on disk (`gutz.scan.store`).
 
-One process computes here; anything with `submit` can take its place (`executor`), since a chunk is computed by
-`compute_chunk(plan, index)`, a plain function of plain data. Only this process writes.
+One process computes here; anything with `submit` can take its place (`executor`), since a chunk is computed
+by `compute_chunk(plan, index)`, a plain function of plain data. Only this process writes.
 """
 
 import errno
@@ -63,8 +63,9 @@ class Here:
 class Outcome:
     """How a run went.
 
-    folder: where it is. points: of the grid; computed: chunks computed this time, of `chunks`. remarks: points per
-    status bit. untrusted: points whose numbers must not be used. stopped: the signal that ended it, 0 if none.
+    folder: where it is. points: of the grid; computed: chunks computed this time, of `chunks`. remarks:
+    points per status bit. untrusted: points whose numbers must not be used. stopped: the signal that ended
+    it, 0 if none.
     """
 
     folder: Path
@@ -94,11 +95,12 @@ def run(
 ) -> Outcome:
     """Compute every point of a scan file and save it.
 
-    out: output folder, default the file's name without ".toml", in the current folder. overrides: texts such as
-    "mixture.T=0.1". resume: continue a stopped run. force: replace an existing one. in_flight: chunks handed to
-    the executor at once.
+    out: output folder, default the file's name without ".toml", in the current folder. overrides: texts such
+    as "mixture.T=0.1". resume: continue a stopped run. force: replace an existing one. progress: called after
+    every chunk. in_flight: chunks handed to the executor at once.
     Raises InputError (mistakes in the file), OutputError (output exists or is in use), DataError (existing run
-    damaged), ResourceError (disk). Ctrl-C or SIGTERM: the chunk at work is finished and saved, `stopped` is set.
+    damaged), ResourceError (disk). At Ctrl-C or SIGTERM the chunk at work is finished and saved, and `stopped`
+    is set.
     """
     source = document.read(Path(path), overrides)
     full = plan(spec.check(source))
@@ -121,8 +123,8 @@ def run(
 def compute_chunk(full: Plan, index: Sequence[int]) -> dict[str, Any]:
     """Solve one chunk; arrays of the full chunk shape for every variable of the run.
 
-    A chunk may lie wholly beyond collapse: the run as a whole has been checked, so such points get their status
-    from the solver and not an error from the model.
+    A chunk may lie wholly beyond collapse: the run as a whole has been checked, so such points get their
+    status from the solver and not an error from the model.
     """
     picked = full.picked(index)
     found = full.lattice(picked)
@@ -141,7 +143,12 @@ def compute_chunk(full: Plan, index: Sequence[int]) -> dict[str, Any]:
 
 
 def _work(
-    folder: Path, full: Plan, target: store.Store, progress: Progress | None, executor: Executor, in_flight: int
+    folder: Path,
+    full: Plan,
+    target: store.Store,
+    progress: Progress | None,
+    executor: Executor,
+    in_flight: int,
 ) -> Outcome:
     """Compute what is not done yet, in order, and write it as it comes."""
     todo = [index for index in full.indices() if not target.done(index)]
@@ -178,7 +185,9 @@ def _write(target: store.Store, index: tuple[int, ...], values: dict[str, Any]) 
         target.write(index, values)
     except OSError as error:
         if error.errno in (errno.ENOSPC, errno.EDQUOT, errno.EFBIG):
-            raise ResourceError("the disk is full; what is done is kept: make room and continue with --resume") from None
+            raise ResourceError(
+                "the disk is full; what is done is kept: make room and continue with --resume"
+            ) from None
         raise OutputError(f"the run cannot be written ({(error.strerror or 'disk error').lower()})") from None
 
 
@@ -205,9 +214,13 @@ def _locked(folder: Path) -> Iterator[None]:
     try:
         lock.acquire()
     except Timeout:
-        raise OutputError(f"{folder.name} is in use by another run; wait for it or choose another --out") from None
+        raise OutputError(
+            f"{folder.name} is in use by another run; wait for it or choose another --out"
+        ) from None
     except OSError as error:
-        raise OutputError(f"{folder.name} cannot be locked ({(error.strerror or 'disk error').lower()})") from None
+        raise OutputError(
+            f"{folder.name} cannot be locked ({(error.strerror or 'disk error').lower()})"
+        ) from None
     try:
         yield
     finally:

@@ -25,7 +25,7 @@ NOT_COMPUTED = -1
 
 
 class Field(NamedTuple):
-    """One array. dims: all its dimensions; dtype: numpy name; attributes: units, long_name, description, flags."""
+    """One array. dims: all its dimensions; dtype: numpy name; attributes: units, names, flags."""
 
     dims: tuple[str, ...]
     dtype: str
@@ -104,13 +104,14 @@ def bytes_per_point(plan: Plan) -> int:
     """Bytes of one point before compression."""
     length = sizes(plan)
     return sum(
-        np.dtype(field.dtype).itemsize * int(np.prod([length[d] for d in field.dims[len(plan.axes) :]], dtype=int))
+        np.dtype(field.dtype).itemsize
+        * int(np.prod([length[d] for d in field.dims[len(plan.axes) :]], dtype=int))
         for field in layout(plan).values()
     )
 
 
 def to_attributes(attributes: Mapping[str, Any]) -> dict[str, Any]:
-    """Attributes a netCDF file can hold: texts, numbers and number arrays stay, anything else becomes JSON text."""
+    """Attributes a netCDF file can hold: texts, numbers, number arrays; anything else becomes JSON text."""
     kept: dict[str, Any] = {}
     for key, value in attributes.items():
         if isinstance(value, str | int | float | np.number | np.ndarray) and not isinstance(value, bool):

@@ -1,7 +1,7 @@
 """What a scan file says, checked: sections [mixture] [lattice] [ansatz] [axes] [output].
 
 In:  a `Document` (text of a TOML file, overrides).
-Out: a frozen `Spec`, or one `InputError` that lists every mistake, one sentence each, with the line it stands on.
+Out: a frozen `Spec`, or one `InputError` that lists every mistake, one sentence each, with its line.
 Only the file is judged here; what the numbers mean together for the physics is judged in `gutz.scan.plan`.
 Free of jax. pydantic lives in this file and goes no further.
 """
@@ -36,7 +36,7 @@ class _Section(BaseModel):
 
 
 class MixtureSection(_Section):
-    """[mixture]: Hubbard parameters and state of the gas; without [lattice], energies in one unit of choice."""
+    """[mixture]: Hubbard parameters and state of the gas; without [lattice], energies in one chosen unit."""
 
     unit: Annotated[str, PlainValidator(fields.text)] = "1"
     t: Annotated[Per | None, PlainValidator(fields.per_direction(fields.real(0.0)))] = None
@@ -240,12 +240,14 @@ def _of_values(error: ValidationError, data: dict[str, Any]) -> Iterator[Mistake
             yield Mistake(key, f"unknown key{_hint(parts[-1], known) if near and not home else hint}")
         else:
             reason = finding.get("ctx", {}).get("error", finding["msg"])
-            yield Mistake(key, f"{fields.shown(finding['input'])} {_verb(str(reason))}")
+            yield Mistake(key, _verb(fields.shown(finding["input"]), str(reason)))
 
 
-def _verb(reason: str) -> str:
-    """Join a value and a rule: rules that start with "must" need a pause, others read on."""
-    return f"is not allowed; it {reason}" if reason.startswith("must") else reason
+def _verb(value: str, reason: str) -> str:
+    """Join a value and a rule: "must ..." needs a pause, "holds ..." names the value itself."""
+    if reason.startswith("holds"):
+        return reason
+    return f"{value} is not allowed; it {reason}" if reason.startswith("must") else f"{value} {reason}"
 
 
 def _hint(word: str, known: tuple[str, ...]) -> str:
@@ -260,7 +262,7 @@ def _home(word: str) -> str | None:
 
 
 def _of_presence(data: dict[str, Any]) -> Iterator[Mistake]:
-    """What must be there, and what must not be there twice; judged by keys alone, values may still be wrong."""
+    """What must be there, and what must not be there twice; judged by keys alone."""
     mixture, axes, lattice = data.get("mixture", {}), data.get("axes", {}), data.get("lattice")
     swept = {str(axis.get("parameter", "")) for axis in axes.values()}
 
@@ -272,7 +274,9 @@ def _of_presence(data: dict[str, Any]) -> Iterator[Mistake]:
         return given(key) or any(path.startswith(key + ".") for path in swept)
 
     if touched("mixture.mu") == touched("mixture.filling"):
-        yield Mistake("mixture", f"{'both' if touched('mixture.mu') else 'neither'} of mu and filling; give exactly one")
+        yield Mistake(
+            "mixture", f"{'both' if touched('mixture.mu') else 'neither'} of mu and filling; give exactly one"
+        )
     if touched("mixture.T") and touched("mixture.entropy"):
         yield Mistake("mixture", "both of T and entropy are given; give at most one")
     if lattice is None:
@@ -328,15 +332,24 @@ def _of_combination(spec: Spec) -> Iterator[Mistake]:
 def _of_axis(spec: Spec, name: str, axis: AxisSection, found: parameters.Target) -> Iterator[Mistake]:
     key = f"axes.{name}"
     if not name.isidentifier() or not name.isascii() or len(name) > 40 or name.startswith("_"):
-        yield Mistake(key, "the name of an axis must be a word of letters, digits and underscores, at most 40")
-    elif name in _RESERVED and not (name in GIVEN_BY_AXIS and found.path == f"mixture.{name}" and found.whole):
+        yield Mistake(
+            key, "the name of an axis must be a word of letters, digits and underscores, at most 40"
+        )
+    elif name in _RESERVED and not (
+        name in GIVEN_BY_AXIS and found.path == f"mixture.{name}" and found.whole
+    ):
         yield Mistake(key, f'"{name}" is the name of an output; call the axis something else')
     if found.path.startswith("lattice.") and spec.lattice is None:
         yield Mistake(f"{key}.parameter", f"{axis.parameter} needs a [lattice] section")
     if spec.lattice is not None and found.path in ("mixture.t", "mixture.U", "mixture.U12"):
-        yield Mistake(f"{key}.parameter", f"{axis.parameter} follows from [lattice]; run over lattice.depth, lattice.a12, ...")
+        yield Mistake(
+            f"{key}.parameter",
+            f"{axis.parameter} follows from [lattice]; run over lattice.depth, lattice.a12, ...",
+        )
     if found.path == "lattice.depth" and found.species and spec.lattice and spec.lattice.same_light:
-        yield Mistake(f"{key}.parameter", f"{axis.parameter} cannot be set for one species where same_light = true")
+        yield Mistake(
+            f"{key}.parameter", f"{axis.parameter} cannot be set for one species where same_light = true"
+        )
     if found.species is not None and max(found.species) >= spec.species:
         yield Mistake(f"{key}.parameter", f"{axis.parameter} names species 2, but there is one species")
     top = 3 if found.path == "lattice.depth" else spec.dim
@@ -347,7 +360,9 @@ def _of_axis(spec: Spec, name: str, axis: AxisSection, found: parameters.Target)
         rule = f"must be one of {', '.join(allowed)}" if allowed else "must be left out for this parameter"
         yield Mistake(f"{key}.unit", f'"{axis.unit}" is not allowed; it {rule}')
     if axis.unit is None and found.parameter.kind == "energy" and spec.lattice is not None:
-        yield Mistake(f"{key}.unit", f'is missing; say in which unit {axis.parameter} is counted, for example "nK"')
+        yield Mistake(
+            f"{key}.unit", f'is missing; say in which unit {axis.parameter} is counted, for example "nK"'
+        )
     ends = axis.values or (axis.start, axis.stop)
     low = min(end for end in ends if end is not None)
     if axis.values is None and axis.start == axis.stop:
@@ -368,7 +383,9 @@ def _of_lengths(spec: Spec) -> Iterator[Mistake]:
         value = getattr(spec.mixture, name)
         if isinstance(value, tuple) and not isinstance(value, Energy):
             if len(value) != species:
-                yield Mistake(f"mixture.{name}", f"has {len(value)} entries; it must have {species}, one per species")
+                yield Mistake(
+                    f"mixture.{name}", f"has {len(value)} entries; it must have {species}, one per species"
+                )
             elif name == "t" and any(isinstance(part, tuple) and len(part) != dim for part in value):
                 yield Mistake("mixture.t", f"must have {dim} directions for each species, as dim = {dim}")
     if spec.lattice is not None and spec.lattice.depth is not None:
@@ -379,7 +396,9 @@ def _of_lengths(spec: Spec) -> Iterator[Mistake]:
             yield Mistake("lattice.depth", "must be the first species' alone where same_light = true")
     if spec.lattice is not None and spec.lattice.same_light and species != 2:
         yield Mistake("lattice.same_light", "must be false or left out, because there is one species")
-    if species == 1 and (spec.mixture.U12 != 0 or any(a.parameter == "mixture.U12" for a in spec.axes.values())):
+    if species == 1 and (
+        spec.mixture.U12 != 0 or any(a.parameter == "mixture.U12" for a in spec.axes.values())
+    ):
         yield Mistake("mixture.U12", "must be left out, because there is one species")
 
 
@@ -391,10 +410,13 @@ def _of_units(spec: Spec) -> Iterator[Mistake]:
         for part in parts:
             if spec.lattice is None and part.unit:
                 yield Mistake(
-                    f"mixture.{name}", f'"{part.value:g} {part.unit}" is not allowed; without [lattice] it must be a plain number'
+                    f"mixture.{name}",
+                    f'"{part.value:g} {part.unit}" is not allowed; without [lattice] it must be a number',
                 )
             elif spec.lattice is not None and not part.unit and part.value != 0:
-                yield Mistake(f"mixture.{name}", f'{part.value:g} needs a unit, for example "5 nK" or "0.1 U1"')
+                yield Mistake(
+                    f"mixture.{name}", f'{part.value:g} needs a unit, for example "5 nK" or "0.1 U1"'
+                )
 
 
 def differences(old: str, new: str) -> Iterator[str]:
@@ -413,5 +435,3 @@ def _flat(data: Any, key: str = "") -> dict[str, Any]:
     for name, value in data.items():
         flat |= _flat(value, f"{key}.{name}" if key else name)
     return flat
-
-

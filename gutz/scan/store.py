@@ -43,7 +43,7 @@ class Store:
         self._fields = schema.layout(plan)
         group = zarr.open_group(path, mode="r+", use_consolidated=False)
         self._arrays = {
-            name: group[name].with_config({"write_empty_chunks": True}) for name in self._fields
+            name: _array(group, name).with_config({"write_empty_chunks": True}) for name in self._fields
         }
 
     @classmethod
@@ -51,7 +51,9 @@ class Store:
         """Write descriptions and coordinates of a new run. Raises OutputError if one is there already."""
         path = inside(folder, NAME)
         if path.exists():
-            raise OutputError(f"{folder.name} holds a run already; continue it with --resume or replace it with --force")
+            raise OutputError(
+                f"{folder.name} holds a run already; continue it with --resume or replace it with --force"
+            )
         sweep(folder)
         unfinished = inside(folder, NAME + ".partial")
         _write_descriptions(unfinished, plan, _provenance(plan, document, tolerances))
@@ -72,9 +74,10 @@ class Store:
             changes = [*differences(theirs, plan.spec.canonical())]
             shown = "; ".join(changes[:5]) + (f"; and {len(changes) - 5} more" if len(changes) > 5 else "")
             raise OutputError(
-                f"{folder.name} holds a run with other settings ({shown}); choose another --out or replace it with --force"
+                f"{folder.name} holds a run with other settings ({shown}); "
+                "choose another --out or replace it with --force"
             )
-        if tuple(group.attrs["chunk"]) != plan.chunk:
+        if tuple(_list(group, "chunk")) != plan.chunk:
             raise OutputError(f"{folder.name} was begun by another version of gutz; replace it with --force")
         return cls(path, plan)
 
@@ -93,7 +96,7 @@ class Store:
         return True
 
     def write(self, index: Sequence[int], values: Mapping[str, Any]) -> None:
-        """Write one chunk, data first, status last. values: arrays of full chunk shape, cut at the grid's end."""
+        """Write one chunk, data first, status last; arrays of full chunk shape are cut at the grid's end."""
         region = self._plan.region(index)
         inner = tuple(slice(0, part.stop - part.start) for part in region)
         for name, field in self._fields.items():
@@ -116,11 +119,15 @@ def remove(folder: Path) -> None:
     path = inside(folder, NAME)
     if path.exists():
         try:
-            ours = str(json.loads((path / "zarr.json").read_bytes())["attributes"]["source"]).startswith("gutz ")
+            ours = str(json.loads((path / "zarr.json").read_bytes())["attributes"]["source"]).startswith(
+                "gutz "
+            )
         except (OSError, ValueError, KeyError, TypeError):
             ours = False
         if not ours:
-            raise DataError(f"{folder.name}/{NAME} was not written by gutz; it is not replaced, move it away yourself")
+            raise DataError(
+                f"{folder.name}/{NAME} was not written by gutz; it is not replaced, move it away yourself"
+            )
         shutil.rmtree(path)
 
 
@@ -144,12 +151,17 @@ def open_run(path: str | Path, variables: Sequence[str] | None = None) -> xr.Dat
     folder = Path(path)
     store = folder / NAME if folder.name != NAME else folder
     group = _open_group(store)
-    names = list(group.attrs["variables"])
+    names = [str(name) for name in _list(group, "variables")]
     wanted = names if variables is None else [n for n in names if n in variables or n == "status"]
     _check_chunks(store, group, wanted)
     try:
         dataset = xr.open_zarr(
-            store, chunks=None, consolidated=False, mask_and_scale=False, decode_times=False, decode_timedelta=False
+            store,
+            chunks=None,
+            consolidated=False,
+            mask_and_scale=False,
+            decode_times=False,
+            decode_timedelta=False,
         )[wanted].load()
     except Exception as error:  # readers raise anything from KeyError to RuntimeError on damaged files
         raise DataError(f"{_shown(store)} is damaged and cannot be read ({_cause(error)})") from None
@@ -164,7 +176,12 @@ def _write_descriptions(path: Path, plan: Plan, attributes: dict[str, Any]) -> N
     lengths = schema.sizes(plan)
     for name, (values, words) in schema.coordinates(plan).items():
         array = group.create_array(
-            name, data=values, chunks=values.shape, compressors=[codec], dimension_names=(name,), attributes=words
+            name,
+            data=values,
+            chunks=values.shape,
+            compressors=[codec],
+            dimension_names=(name,),
+            attributes=words,
         )
         assert array.shape == values.shape
     for name, field in schema.layout(plan).items():
@@ -238,11 +255,16 @@ def _open_group(path: Path) -> zarr.Group:
         number = attributes.get("schema_version")
         whole = seal == _seal(path, attributes)
     except Exception as error:  # a damaged description can fail in any way
-        raise DataError(f"{_shown(path)} is damaged: its description cannot be read ({_cause(error)})") from None
+        raise DataError(
+            f"{_shown(path)} is damaged: its description cannot be read ({_cause(error)})"
+        ) from None
     if not ours:
         raise DataError(f"{_shown(path)} was not written by gutz")
     if isinstance(number, int) and number > schema.VERSION:
-        raise DataError(f"{_shown(path)} was written by a newer gutz (layout {number}); this one reads up to {schema.VERSION}")
+        raise DataError(
+            f"{_shown(path)} was written by a newer gutz (layout {number}); "
+            f"this one reads up to {schema.VERSION}"
+        )
     if not whole:
         raise DataError(f"{_shown(path)} is damaged: its description does not match its seal")
     return group
@@ -250,22 +272,38 @@ def _open_group(path: Path) -> zarr.Group:
 
 def _check_chunks(path: Path, group: zarr.Group, names: Sequence[str]) -> None:
     """Refuse a run in which a chunk has a status but some of its numbers are missing."""
-    status = group["status"]
+    status = _array(group, "status")
     counts = [-(-n // c) for n, c in zip(status.shape, status.chunks, strict=True)]
     for index in np.ndindex(*counts):
         if _chunk_file(path / "status", index, status.ndim).exists():
             for name in names:
-                if not _chunk_file(path / name, index, group[name].ndim).exists():
-                    raise DataError(f"{_shown(path)} is damaged: a piece of {name} is missing; --resume computes it again")
+                if not _chunk_file(path / name, index, _array(group, name).ndim).exists():
+                    raise DataError(
+                        f"{_shown(path)} is damaged: a piece of {name} is missing; --resume computes it again"
+                    )
 
 
 def _check_layout(path: Path, dataset: xr.Dataset) -> None:
     """Refuse numbers whose type or unit is not what their name promises."""
     for name, array in dataset.data_vars.items():
         if name in VARIABLES and array.dtype != VARIABLES[str(name)].dtype:
-            raise DataError(f"{_shown(path)}: {name} is stored as {array.dtype}; it must be {VARIABLES[str(name)].dtype}")
+            raise DataError(
+                f"{_shown(path)}: {name} is stored as {array.dtype}; it must be {VARIABLES[str(name)].dtype}"
+            )
         if not {"units", "long_name"} <= array.attrs.keys():
             raise DataError(f"{_shown(path)}: {name} has no unit or no name for people")
+
+
+def _array(group: zarr.Group, name: str) -> zarr.Array[Any]:
+    found = group[name]
+    assert isinstance(found, zarr.Array)
+    return found
+
+
+def _list(group: zarr.Group, name: str) -> list[Any]:
+    found = group.attrs[name]
+    assert isinstance(found, list)
+    return found
 
 
 def _chunk_file(array: Path, index: Sequence[int], ndim: int) -> Path:
