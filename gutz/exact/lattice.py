@@ -47,6 +47,11 @@ class Cluster:
         return len(self.positions)
 
     @property
+    def is_open_chain(self) -> bool:
+        """Whether the bonds are exactly (i, i + 1), each once."""
+        return sorted(self.bonds) == [(i, i + 1) for i in range(self.sites - 1)]
+
+    @property
     def momenta(self) -> Floats:
         """Grid momenta 2 pi m / L of the box, shape (sites, dimension), m = 0..L-1, lattice constant 1."""
         axes = [2 * np.pi * np.arange(length) / length for length in self.shape]

@@ -128,7 +128,7 @@ def test_mixture_limits():
 
 def test_mixture_against_rings():
     """Ring of 10, odd N_a (no string twist), gapped charges: e_L - e_inf = -pi v_s/(6 L^2), spin
-    velocity 2t I1(2 pi t/U)/I0(2 pi t/U) (Essler et al., The One-Dimensional Hubbard Model, 2005, from memory);
+    velocity 2t I1(2 pi t/U)/I0(2 pi t/U) (Essler et al., The One-Dimensional Hubbard Model, from memory);
     the next correction is of relative order 1/L^2 with logarithms: 4% allowed."""
     U12, length = 12.0, 10
     model = LatticeModel(ring(length), t=(1.0, 1.0), U=(0, 0), U12=U12, n_max=1)
