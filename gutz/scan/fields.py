@@ -172,7 +172,7 @@ def one_of(*words: str) -> Callable[[Any], str]:
 
     def convert(value: Any) -> str:
         if value not in words or not isinstance(value, str):
-            raise ValueError(f"must be {_or(words)}{suggestion(value, words)}")
+            raise ValueError(f"must be {_or(words)}")
         return value
 
     return convert
@@ -186,9 +186,8 @@ def several_of(*words: str) -> Callable[[Any], tuple[str, ...]]:
             raise ValueError(f"must be a list of {_or(words)}")
         for part in value:
             if part not in words:
-                raise ValueError(
-                    f"holds {shown(part)}; it must be a list of {_or(words)}{suggestion(part, words)}"
-                )
+                hint = suggestion(part, words) or f"; allowed are {', '.join(words)}"
+                raise ValueError(f"holds {shown(part)}, which is not known{hint}")
         if len(set(value)) < len(value):
             raise ValueError("must not name anything twice")
         return tuple(value)

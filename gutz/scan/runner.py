@@ -99,8 +99,8 @@ def run(
     as "mixture.T=0.1". resume: continue a stopped run. force: replace an existing one. progress: called after
     every chunk. in_flight: chunks handed to the executor at once.
     Raises InputError (mistakes in the file), OutputError (output exists or is in use), DataError (existing run
-    damaged), ResourceError (disk). At Ctrl-C or SIGTERM the chunk at work is finished and saved, and `stopped`
-    is set.
+    damaged), ResourceError (disk). At Ctrl-C or SIGTERM the chunk at work is finished and saved, and then
+    `stopped` is set.
     """
     source = document.read(Path(path), overrides)
     full = plan(spec.check(source))

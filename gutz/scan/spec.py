@@ -187,7 +187,8 @@ def check(document: Document) -> Spec:
             spec = Spec(**document.data)
         except ValidationError as error:
             mistakes += _of_values(error, document.data)
-        mistakes += [m for m in _of_presence(document.data) if m.key not in {k for k, _ in mistakes}]
+        missing = [*_of_presence(document.data), *_of_axes_presence(document.data.get("axes", {}))]
+        mistakes += [m for m in missing if m.key not in {key for key, _ in mistakes}]
     if spec is not None and not mistakes:
         mistakes += [*_of_combination(spec)]
     if mistakes or spec is None:
@@ -273,12 +274,14 @@ def _of_presence(data: dict[str, Any]) -> Iterator[Mistake]:
     def touched(key: str) -> bool:
         return given(key) or any(path.startswith(key + ".") for path in swept)
 
-    if touched("mixture.mu") == touched("mixture.filling"):
-        yield Mistake(
-            "mixture", f"{'both' if touched('mixture.mu') else 'neither'} of mu and filling; give exactly one"
-        )
+    if touched("mixture.mu") and touched("mixture.filling"):
+        yield Mistake("mixture", "both mu and filling are given; give exactly one")
     if touched("mixture.T") and touched("mixture.entropy"):
-        yield Mistake("mixture", "both of T and entropy are given; give at most one")
+        yield Mistake("mixture", "both T and entropy are given; give at most one")
+    if not all(_is_parameter(path) for path in swept if path):
+        return  # what seems to be missing may be what the misspelt axis was meant to give
+    if not touched("mixture.mu") and not touched("mixture.filling"):
+        yield Mistake("mixture", "neither mu nor filling is given; give exactly one")
     if lattice is None:
         for name in ("t", "U"):
             if not given(f"mixture.{name}") and not all(f"mixture.{name}.{i}" in swept for i in (1, 2)):
@@ -295,20 +298,26 @@ def _of_presence(data: dict[str, Any]) -> Iterator[Mistake]:
         for name in ("a22", "a12"):
             if not pair and touched(f"lattice.{name}"):
                 yield Mistake(f"lattice.{name}", "must be left out, because there is one species")
-    for name, axis in axes.items():
-        yield from _of_axis_presence(f"axes.{name}", axis)
 
 
-def _of_axis_presence(key: str, axis: dict[str, Any]) -> Iterator[Mistake]:
-    if "parameter" not in axis:
-        yield Mistake(f"{key}.parameter", 'is missing; name what the axis runs over, for example "mixture.T"')
-    range_keys = [name for name in ("start", "stop", "points") if name in axis]
-    if "values" in axis:
-        for name in (*range_keys, *(["spacing"] if "spacing" in axis else [])):
-            yield Mistake(f"{key}.{name}", "must be left out where values are listed")
-    else:
-        for name in ("start", "stop", "points"):
-            if name not in axis:
+def _is_parameter(path: str) -> bool:
+    try:
+        parameters.target(path)
+    except ValueError:
+        return False
+    return True
+
+
+def _of_axes_presence(axes: dict[str, Any]) -> Iterator[Mistake]:
+    """An axis needs its parameter, and either a range or values."""
+    for axis_name, axis in axes.items():
+        key = f"axes.{axis_name}"
+        if "parameter" not in axis:
+            yield Mistake(f"{key}.parameter", 'is missing; name what the axis runs over, such as "mixture.T"')
+        for name in ("start", "stop", "points", "spacing"):
+            if "values" in axis and name in axis:
+                yield Mistake(f"{key}.{name}", "must be left out where values are listed")
+            elif "values" not in axis and name not in axis and name != "spacing":
                 yield Mistake(f"{key}.{name}", "is missing; give start, stop and points, or values")
 
 
