@@ -1,5 +1,4 @@
-"""Exchange between sites that hold one fixed set of degenerate states: couplings and effective bond
-operators.
+"""Exchange between sites that hold one set of degenerate states: couplings and effective bond operators.
 
 In:  a two-species `Mixture` and the low-energy states of a site: one atom (anti-pairs), nothing or a pair
      (pairs), or any other set.
@@ -66,8 +65,8 @@ class ExchangeCouplings(NamedTuple):
 
     @property
     def pair_hopping(self) -> Array:
-        """Amplitude t_p of -t_p (p†_i p_j + h.c.), p = b1 b2 for pairs and b1† b2 for anti-pairs: J_perp /
-        2.""" return 0.5 * self.perp
+        """Amplitude t_p of -t_p (p†_i p_j + h.c.), p = b1 b2 (pairs) or b1† b2 (anti-pairs): J_perp / 2."""
+        return 0.5 * self.perp
 
     @property
     def pair_interaction(self) -> Array:
@@ -81,8 +80,7 @@ class ExchangeCouplings(NamedTuple):
 
 
 def exchange_couplings(mixture: Mixture, order: Order = "antipair") -> ExchangeCouplings:
-    """Second-order couplings between sites with one atom each ("antipair") or with a pair or nothing
-    ("pair").
+    """Second-order couplings between sites with one atom ("antipair") or with a pair or nothing ("pair").
 
     With W = U12 for anti-pairs and W = -U12 for pairs (Kuklov and Svistunov, PRL 90, 100401 (2003); Duan,
     Demler and Lukin, PRL 91, 090402 (2003); derived again here, from the energies of two sites):
@@ -98,8 +96,7 @@ def exchange_couplings(mixture: Mixture, order: Order = "antipair") -> ExchangeC
 
 
 def bond_operator(mixture: Mixture, states: tuple[State, ...]) -> Array:
-    """Effective two-site operator on any set of local states, shape (..., direction, d², d²), d =
-    len(states).
+    """Effective two-site operator on any set of local states, shape (..., direction, d², d²) for d states.
 
     states: occupations (n1, n2). Rows and columns run over (state of the first site, state of the second),
     the second fastest. First order (hopping inside the set) plus second order; where two states of the set
@@ -224,8 +221,8 @@ def _admixture(mixture: Mixture, s: _TwoSites, hop: Array) -> Array:
 
 
 def _isolation(mixture: Mixture, states: tuple[State, ...]) -> tuple[Array, Array]:
-    """Gap and validity of `ExchangeCouplings`; states reached in two hops count with the second-order
-    energy.""" s = _space(states, mixture.n_max)
+    """Gap and validity of `ExchangeCouplings`; two-hop states count with the second-order energy."""
+    s = _space(states, mixture.n_max)
     hop = _hopping(mixture, s)
     amplitude = jnp.abs(_admixture(mixture, s, hop))
     below = _below(mixture, s)
