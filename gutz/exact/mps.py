@@ -36,8 +36,10 @@ from gutz.exact.mps_tensors import (
 
 Matrices = dict[Charge, Floats]
 
-_NOISE = (1e-4, 1e-5, 1e-6, 1e-7, 1e-8, 1e-9)
 _LANCZOS_STEPS = 12
+# The random start: how far charges may stray from an even filling, and how many states each brings.
+_START_SPREAD = 2.5
+_START_STATES = 3
 
 
 @dataclass(frozen=True, eq=False)
@@ -99,9 +101,10 @@ def _enlarge(
     lowers = [space.lower(a) for a in range(space.species)]
     energy = {}
     for q, parts in fusion.items():
-        matrix = np.zeros((sizes[q], sizes[q]))
+        matrix, diagonal = np.zeros((sizes[q], sizes[q])), np.empty(sizes[q])
         for (s, incoming), rows in parts.items():
-            matrix[rows, rows] += side.energy[incoming] + onsite[s] * np.eye(side.bond[incoming])
+            matrix[rows, rows] += side.energy[incoming]
+            diagonal[rows] = onsite[s]
             for a, lower in enumerate(lowers):
                 raised = subtract(incoming, lower.shift)
                 if s in lower.entries and side.bond.get(raised):
@@ -110,6 +113,7 @@ def _enlarge(
                     other = parts[target, raised]
                     matrix[other, rows] += block.T
                     matrix[rows, other] += block
+        matrix.flat[:: sizes[q] + 1] += diagonal
         energy[q] = matrix
     index_lists = []
     for lower in lowers:
@@ -234,35 +238,12 @@ def _lowest(apply: Callable[[Floats], Floats], start: Floats, tolerance: float) 
         basis.append(image / length)
 
 
-def _truncate(
-    theta: Matrices, back: _Enlarged, noise: float, max_bond: int, cutoff: float, shifts: Sequence[Charge]
-) -> tuple[Matrices, float]:
-    """Columns of the back side to keep, and the weight cut.
-
-    Without noise: left singular vectors. With noise: eigenvectors of the reduced density matrix plus noise
-    times its images under b_a and b+_a of the outermost site, which opens charges that theta does not yet
-    hold (S. R. White, PRB 72, 180403 (2005)).
-    """
+def _truncate(theta: Matrices, max_bond: int, cutoff: float) -> tuple[Matrices, float]:
+    """Left singular vectors of the largest singular values over all sectors, and the weight cut."""
     vectors, weights = {}, {}
-    if noise == 0:
-        for q, matrix in theta.items():
-            u, s, _ = np.linalg.svd(matrix, full_matrices=False)
-            vectors[q], weights[q] = u, s**2
-    else:
-        density = {q: matrix @ matrix.T for q, matrix in theta.items()}
-        mixed = {q: rho.copy() for q, rho in density.items()}
-        for a, shift in enumerate(shifts):
-            for q, (rows, columns, factors) in back.lower[a].items():
-                lowered = add(q, shift)
-                scale = noise * np.outer(factors, factors)
-                for source, target, pick, put in ((q, lowered, columns, rows), (lowered, q, rows, columns)):
-                    if source in density:
-                        size = back.sizes[target]
-                        goal = mixed.setdefault(target, np.zeros((size, size)))
-                        goal[np.ix_(put, put)] += scale * density[source][np.ix_(pick, pick)]
-        for q, rho in mixed.items():
-            values, u = np.linalg.eigh(rho)
-            vectors[q], weights[q] = u, np.maximum(values, 0.0)
+    for q, matrix in theta.items():
+        u, s, _ = np.linalg.svd(matrix, full_matrices=False)
+        vectors[q], weights[q] = u, s**2
     order = np.sort(np.concatenate(list(weights.values())))[::-1]
     total = order.sum()
     tail = total - np.cumsum(order)
@@ -273,26 +254,17 @@ def _truncate(
         chosen = (weights[q] >= threshold) & (weights[q] > 1e-30 * total)
         if chosen.any():
             kept[q] = u[:, chosen]
-    lost = 1.0 - sum(float(np.sum((u.T @ theta[q]) ** 2)) for q, u in kept.items() if q in theta)
+    lost = 1.0 - sum(float(weights[q][: u.shape[1]].sum()) for q, u in kept.items()) / total
     return kept, max(lost, 0.0)
 
 
 # --- sweeps -------------------------------------------------------------------------------------------------
 
 
-def _even_filling(N: Charge, sites: int) -> list[Charge]:
-    """Occupation of each site: every species spread as evenly as whole atoms allow, interleaved."""
-    rows = []
-    for a, atoms in enumerate(N):
-        steps = np.diff(np.arange(sites + 1) * atoms // sites)
-        rows.append(np.roll(steps, a * max(1, sites // max(1, 2 * atoms))))
-    return [tuple(int(x) for x in column) for column in np.array(rows).T]
-
-
 class _Sweeper:
     """Both stacks of sides, and the wavefunction on the current bond."""
 
-    def __init__(self, model: LatticeModel, N: Charge) -> None:
+    def __init__(self, model: LatticeModel, N: Charge, seed: int) -> None:
         self.model, self.total = model, N
         self.sites = model.cluster.sites
         self.space = fock_space(model.cutoff)
@@ -305,22 +277,31 @@ class _Sweeper:
         self.tensors: tuple[dict[int, SiteTensor], dict[int, SiteTensor]] = ({}, {})
         # What one half-sweep enlarges on its way the next one meets again, unchanged, on its way back.
         self.waiting: tuple[dict[int, _Enlarged], dict[int, _Enlarged]] = ({}, {})
-        start = _even_filling(N, self.sites)
-        self.theta: Matrices = {}
+        self.theta = self._random_start(np.random.default_rng(seed))
+
+    def _random_start(self, rng: np.random.Generator) -> Matrices:
+        """Random right side of every bond, and a random wavefunction on the first.
+
+        A few states of every charge near that of an even filling: a product state would leave atoms that
+        cannot hop where it happened to put them.
+        """
         for i in range(self.sites - 1, 0, -1):
             enlarged = self.enlarged(1, i)
-            s = self.space.physical.index(start[i])
-            (incoming,) = self.sides[1][i].bond
-            charge = add(incoming, start[i])
-            kept = {charge: np.zeros((enlarged.sizes[charge], 1))}
-            kept[charge][enlarged.fusion[charge][s, incoming], 0] = 1.0
+            even = np.array(self.total) * (self.sites - i) / self.sites
+            distance = {q: np.abs(np.array(q) - even).max() for q in enlarged.sizes}
+            reach = max(_START_SPREAD, min(distance.values()))
+            kept = {}
+            for q, rows in enlarged.sizes.items():
+                if distance[q] <= reach:
+                    kept[q] = np.linalg.qr(rng.normal(size=(rows, min(rows, _START_STATES))))[0]
             if i > 1:
                 self.store(1, i, enlarged, kept)
-            else:
-                left = self.enlarged(0, 0)
-                row = np.zeros((left.sizes[start[0]], 1))
-                row[left.fusion[start[0]][self.space.physical.index(start[0]), zero]] = 1.0
-                self.theta = {start[0]: row @ kept[charge].T}
+        theta = {}
+        for q, rows in self.enlarged(0, 0).sizes.items():
+            right = kept.get(subtract(self.total, q))
+            if right is not None:
+                theta[q] = rng.normal(size=(rows, right.shape[1])) @ right.T
+        return theta
 
     def enlarged(self, end: int, i: int) -> _Enlarged:
         """The side grown from `end` (0 left, 1 right) that stops before site i, plus site i."""
@@ -363,11 +344,8 @@ class _Sweeper:
                     theta[target][grown[target][s, q]] = part[:, columns] @ block.T
         return theta
 
-    def half_sweep(
-        self, end: int, noise: float, max_bond: int, cutoff: float, tolerance: float
-    ) -> tuple[float, float]:
+    def half_sweep(self, end: int, max_bond: int, cutoff: float, tolerance: float) -> tuple[float, float]:
         """Optimise every bond once, moving away from `end`; the last energy and the largest weight cut."""
-        shifts = [lower.shift for lower in self.lowers]
         step = 1 if end == 0 else -1
         path = range(self.sites - 1) if end == 0 else range(self.sites - 1, 0, -1)
         energy, worst = 0.0, 0.0
@@ -382,7 +360,7 @@ class _Sweeper:
                 # The far end: turn round, exchanging the roles of the two sides.
                 self.theta = {subtract(self.total, q): matrix.T for q, matrix in self.theta.items()}
                 return energy, worst
-            kept, lost = _truncate(self.theta, back, noise, max_bond, cutoff, shifts)
+            kept, lost = _truncate(self.theta, max_bond, cutoff)
             worst = max(worst, lost)
             self.store(end, i, back, kept)
             self.theta = self.carry(end, i, kept, front.fusion)
@@ -392,7 +370,7 @@ class _Sweeper:
         """Tensors of the current state (on the first bond, facing right), without further optimisation."""
         for i in range(self.sites - 1):
             back, front = self.enlarged(0, i), self.enlarged(1, i + 1)
-            kept, _ = _truncate(self.theta, back, 0.0, max_bond, 0.0, ())
+            kept, _ = _truncate(self.theta, max_bond, 0.0)
             self.store(0, i, back, kept)
             if i < self.sites - 2:
                 self.theta = self.carry(0, i, kept, front.fusion)
@@ -415,6 +393,7 @@ def ground_state(
     cutoff: float = 1e-13,
     tolerance: float = 1e-9,
     max_sweeps: int = 40,
+    seed: int = 0,
 ) -> ChainState:
     """Ground state of an open chain at fixed atom numbers.
 
@@ -425,10 +404,13 @@ def ground_state(
         cutoff: weight that may be cut at a bond even below max_bond.
         tolerance: relative change of the energy over a sweep that counts as settled.
         max_sweeps: sweeps (there and back) before giving up; the result then says converged = False.
+        seed: of the random state to start from.
 
-    The bond dimension grows over the first sweeps while noise opens charge sectors; then sweeps run without
-    noise. How far the result is from the ground state: look at `discarded` and `variance`, and at a larger
-    max_bond. Raises InputError for impossible numbers or a cluster that is not an open chain.
+    The bond dimension doubles from sweep to sweep up to max_bond. How far the result is from an eigenstate:
+    look at `discarded` and `variance`, and at a larger max_bond. Which eigenstate: with hoppings of very
+    unequal size, or wells far apart, sweeps can settle in a metastable arrangement of the slow atoms whose
+    variance is zero; only other seeds reveal that, and the lowest energy is the best answer.
+    Raises InputError for impossible numbers or a cluster that is not an open chain.
     """
     numbers = (int(N),) if isinstance(N, int | np.integer) else tuple(int(n) for n in N)
     most = [cutoff_a * model.cluster.sites for cutoff_a in model.cutoff]
@@ -436,17 +418,16 @@ def ground_state(
         raise InputError(f"N: got {N}, must be one atom number per species, within 0..{tuple(most)}.")
     if max_bond < 1 or max_sweeps < 1:
         raise InputError(f"max_bond, max_sweeps: got {max_bond}, {max_sweeps}, must be at least 1.")
-    sweeper = _Sweeper(model, numbers)
+    sweeper = _Sweeper(model, numbers, seed)
     energy, previous, discarded = np.inf, np.inf, 0.0
     converged = False
     sweep = 0
     while sweep < max_sweeps and not converged:
-        noise = _NOISE[sweep] if sweep < len(_NOISE) else 0.0
         bond = min(max_bond, 20 * 2**sweep)
-        accuracy = 1e-6 if noise else 1e-12
-        sweeper.half_sweep(0, noise, bond, cutoff, accuracy)
-        energy, discarded = sweeper.half_sweep(1, noise, bond, cutoff, accuracy)
-        converged = noise == 0 and abs(energy - previous) <= tolerance * max(1.0, abs(energy))
+        accuracy = 1e-12 if bond == max_bond else 1e-7
+        sweeper.half_sweep(0, bond, cutoff, accuracy)
+        energy, discarded = sweeper.half_sweep(1, bond, cutoff, accuracy)
+        converged = bond == max_bond and abs(energy - previous) <= tolerance * max(1.0, abs(energy))
         previous = energy
         sweep += 1
     tensors = sweeper.left_orthonormal(max_bond)

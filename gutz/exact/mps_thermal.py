@@ -43,8 +43,8 @@ _COMPOSITION = (_OUTER, _OUTER, 1 - 4 * _OUTER, _OUTER, _OUTER)
 class ThermalChain(TensorChain):
     """Purification of exp(-H/T)/Xi; `free_energy` = -T ln Xi, extensive, H including - sum mu n.
 
-    `discarded` is the sum of all weights cut on the way; later cooling mixes what was cut back in, so errors of
-    ln Xi and of correlators go with its square root. `entropy` in units of k_B.
+    `discarded` is the sum of all weights cut on the way; later cooling mixes what was cut back in, so errors
+    of ln Xi and of correlators go with its square root. `entropy` in units of k_B.
     """
 
     model: LatticeModel

@@ -137,16 +137,17 @@ def test_mott_energy_series_on_long_chains():
 
 @pytest.mark.slow
 def test_hard_core_mixture_approaches_lieb_and_wu():
-    """Energy per site that 16 more sites add (open ends cancel up to 1/L^2) against the infinite chain."""
+    """Energy per site that 12 more sites add (open ends cancel up to 1/L^2) against the infinite chain.
+    Own runs: the difference is 1.1e-4 here and falls with length; 2e-4 allowed."""
     energies = [
         mps.ground_state(
             LatticeModel(chain(L), t=(1.0, 1.0), U=(0.0, 0.0), U12=8.0, n_max=1),
             (L // 2, L // 2),
             max_bond=120,
         ).energy
-        for L in (24, 40)
+        for L in (20, 32)
     ]
-    assert (energies[1] - energies[0]) / 16 == pytest.approx(chains.mixture_energy(1.0, 8.0), abs=5e-4)
+    assert (energies[1] - energies[0]) / 12 == pytest.approx(chains.mixture_energy(1.0, 8.0), abs=2e-4)
 
 
 def test_duality_of_the_hard_core_mixture():
@@ -162,12 +163,25 @@ def test_duality_of_the_hard_core_mixture():
 
 
 def test_fixed_numbers_make_every_noise_row_sum_to_zero():
-    model = LatticeModel(chain(10), t=(0.2, 0.2), U=(1.0, 1.0), U12=-0.6, n_max=2)
-    state = mps.ground_state(model, (5, 5), max_bond=40)
+    model = LatticeModel(chain(8), t=(0.2, 0.2), U=(1.0, 1.0), U12=-0.6, n_max=2)
+    state = mps.ground_state(model, (4, 4), max_bond=20, max_sweeps=3)
     for a, b in product(range(2), repeat=2):
         full = correlators.noise_map(state, a, b)
         full += (a == b) * np.diag(correlators.momentum_distribution(state, a))
-        assert full.sum(axis=1) == pytest.approx(np.zeros(10), abs=1e-10)
+        assert full.sum(axis=1) == pytest.approx(np.zeros(8), abs=1e-10)
+
+
+def test_atoms_that_cannot_hop_find_their_places():
+    """Species 2 frozen in a trap: exact diagonalisation takes the best of all its arrangements."""
+    trap = 0.08 * (np.arange(8) - 3.5) ** 2
+    model = LatticeModel(chain(8), t=(0.1, 0.0), U=(1.0, 1.0), U12=2.5, mu=(-trap, -2 * trap), n_max=2)
+    expected = ed.ground_state(model, (3, 3)).energy
+    assert mps.ground_state(model, (3, 3)).energy == pytest.approx(expected, abs=1e-9)
+
+
+def test_another_seed_finds_the_same_state():
+    energies = [mps.ground_state(TWO, (3, 2), seed=seed).energy for seed in range(3)]
+    assert energies == pytest.approx([energies[0]] * 3, abs=1e-10)
 
 
 def test_unsettled_runs_say_so():
@@ -256,7 +270,7 @@ def test_mistakes_get_one_sentence(call, part):
     assert str(caught.value).endswith(".") and "\n" not in str(caught.value)
 
 
-def test_noise_maps_of_long_chains_are_refused():
-    state = mps.ground_state(LatticeModel(chain(73), t=(1.0,), U=(0.0,), n_max=1), 1, max_bond=2)
-    with pytest.raises(ResourceError, match="73\\^4 four-operator terms, the limit is 72\\^4"):
-        correlators.noise_map(state, 0, 0)
+def test_noise_maps_of_long_chains_are_refused(monkeypatch):
+    monkeypatch.setattr(correlators, "FOUR_BODY_LIMIT", 4)
+    with pytest.raises(ResourceError, match="5 sites need 5\\^4 four-operator terms, the limit is 4\\^4"):
+        correlators.noise_map(mps.ground_state(ONE, 1), 0, 0)
