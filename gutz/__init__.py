@@ -1,0 +1,37 @@
+"""`gutz`: where paired, counterflow and ordinary superfluids of two-species lattice bosons are, and what they look like.
+
+The public names load on first use, so that importing the package (and the command line) stays fast. Importing it
+switches jax to 64-bit numbers: thermal free energies at low temperature lose all digits otherwise.
+"""
+
+import os
+import sys
+from importlib import import_module
+from typing import Any
+
+if "jax" in sys.modules:
+    import_module("gutz.precision")
+else:
+    os.environ.setdefault("JAX_ENABLE_X64", "1")
+
+__version__ = "0.1.0"
+
+_HOME = {
+    "Mixture": "gutz.model",
+    "Phase": "gutz.phases",
+    "Solution": "gutz.solution",
+    "Status": "gutz.status",
+    "solve": "gutz.solver",
+}
+
+__all__ = ["Mixture", "Phase", "Solution", "Status", "solve"]
+
+
+def __getattr__(name: str) -> Any:
+    if name in _HOME:
+        return getattr(import_module(_HOME[name]), name)
+    raise AttributeError(f"module 'gutz' has no attribute {name!r}")
+
+
+def __dir__() -> list[str]:
+    return sorted([*__all__, "__version__"])

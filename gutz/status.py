@@ -34,8 +34,8 @@ SENTENCES: dict[Status, str] = {
     Status.COLLAPSE: "U12 is below -sqrt(U1 U2), where the mixture collapses; nothing was computed",
     Status.DEMIXING: "U12 is above sqrt(U1 U2), where a superfluid mixture separates; the uniform state shown "
     "may not be the true one",
-    Status.FILLING_GAP: "no uniform state has the filling asked for (it lies inside a jump between two phases); "
-    "the state at the jump is shown",
+    Status.FILLING_GAP: "no uniform state has the filling (or entropy) asked for: it lies inside a jump "
+    "between two phases; a state at the jump is shown",
     Status.PLATEAU: "the filling does not depend on mu here; mu is the middle of the plateau",
     Status.DEGENERATE: "the ground state of a site is degenerate at T = 0; responses to small changes are not "
     "defined, use a small T > 0",

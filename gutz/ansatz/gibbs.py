@@ -40,18 +40,30 @@ class Levels(NamedTuple):
 
 def levels(h: Array, T: Array) -> Levels:
     """Eigensystem, Boltzmann weights, free energy and entropy; for values only, not to be differentiated."""
+    lv = block_levels(h[..., None, :, :], T)
+    return lv._replace(
+        energy=lv.energy[..., 0, :], vectors=lv.vectors[..., 0, :, :], weight=lv.weight[..., 0, :]
+    )
+
+
+def block_levels(h: Array, T: Array) -> Levels:
+    """As `levels`, for block-diagonal matrices given as (..., block, state, state), sharing one T per site.
+
+    energy, weight: (..., block, level); the weights of all blocks together sum to 1.
+    """
     energy, vectors = jnp.linalg.eigh(h, symmetrize_input=False)[:2]
     warm = T > 0
     beta = jnp.where(warm, 1.0 / jnp.where(warm, T, 1.0), 0.0)
-    excitation = energy - energy[..., :1]
-    scale = jnp.maximum(jnp.abs(h).max((-1, -2)), 1e-300)
-    ground = excitation <= (DEGENERACY * scale)[..., None]
-    boltzmann = jnp.where(warm[..., None], jnp.exp(-excitation * beta[..., None]), ground)
-    total = boltzmann.sum(-1)
-    weight = boltzmann / total[..., None]
-    free_energy = energy[..., 0] - T * jnp.log(total)
+    lowest = energy[..., 0].min(-1)
+    excitation = energy - lowest[..., None, None]
+    scale = jnp.maximum(jnp.abs(h).max((-1, -2, -3)), 1e-300)
+    ground = excitation <= (DEGENERACY * scale)[..., None, None]
+    boltzmann = jnp.where(warm[..., None, None], jnp.exp(-excitation * beta[..., None, None]), ground)
+    total = boltzmann.sum((-1, -2))
+    weight = boltzmann / total[..., None, None]
+    free_energy = lowest - T * jnp.log(total)
     # beta <E - E0> + log Z has no cancellation: both terms are positive.
-    entropy = jnp.where(warm, beta * (weight * excitation).sum(-1) + jnp.log(total), 0.0)
+    entropy = jnp.where(warm, beta * (weight * excitation).sum((-1, -2)) + jnp.log(total), 0.0)
     return Levels(energy, vectors, weight, free_energy, entropy, beta)
 
 
@@ -60,7 +72,8 @@ def response_kernel(lv: Levels) -> Array:
 
     The change of the state under h -> h + A is -K∘A in the basis of levels, up to normalisation.
     """
-    beta = lv.inverse_temperature[..., None, None]
+    beta = lv.inverse_temperature
+    beta = beta.reshape(beta.shape + (1,) * (lv.energy.ndim - beta.ndim + 1))
     gap = jnp.abs(lv.energy[..., :, None] - lv.energy[..., None, :])
     lower = jnp.maximum(lv.weight[..., :, None], lv.weight[..., None, :])
     upper = jnp.minimum(lv.weight[..., :, None], lv.weight[..., None, :])
@@ -310,12 +323,17 @@ ad.primitive_transposes[_second_p] = _second_transpose
 
 
 def response(h: Array, T: Array, operators: Array) -> Array:
-    """Static responses chi_AB = -d<A>/d lambda_B for h -> h + lambda_B B.
+    """Static responses chi_AB = d<A>/dy_B for h -> h - y_B B, differentiable.
 
-    operators: real matrices, shape (operator, state, state), symmetrised here; returns (..., operator, operator).
+    operators: symmetric matrices, shape (..., operator, state, state); returns (..., operator, operator).
     """
-    symmetric = 0.5 * (operators + jnp.swapaxes(operators, -1, -2))
-    changes = jnp.stack(
-        [state_change(h, T, jnp.broadcast_to(B, h.shape)) for B in symmetric], axis=-3
-    )
-    return -jnp.einsum("aij,...bij->...ab", symmetric, changes)
+    changes = state_change(h[..., None, :, :], jnp.asarray(T)[..., None], operators)
+    return -jnp.einsum("...aij,...bij->...ab", operators, changes)
+
+
+def response_from_levels(lv: Levels, in_levels: Array) -> Array:
+    """As `response`, for operators given in the basis of levels, (..., operator, level, level); values only."""
+    weighted = response_kernel(lv)[..., None, :, :] * in_levels
+    chi = (weighted[..., :, None, :, :] * in_levels[..., None, :, :, :]).sum((-1, -2))
+    mean = jnp.einsum("...aii,...i->...a", in_levels, lv.weight)
+    return chi - lv.inverse_temperature[..., None, None] * mean[..., :, None] * mean[..., None, :]

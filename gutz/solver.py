@@ -1,0 +1,207 @@
+"""Solve a mixture: from any batch of parameters to a `Solution` with a status on every point.
+
+In:  a `Mixture` (chemical potentials or fillings, temperatures or entropies), the ansatz.
+Out: a `Solution`. No single bad point raises; it carries a status. Differentiable in every parameter.
+
+Numbers pass through fixed batch sizes, so that a scan compiles once. Under jax.grad and friends the minimum is
+found for the numbers behind the tracers, and two chord-Newton steps on the stationarity and target conditions
+attach the derivatives: each step makes one more order of the implicit function exact.
+"""
+
+from functools import partial
+from typing import Any
+
+import jax
+import jax.numpy as jnp
+import numpy as np
+
+from gutz import limits, precision, targets
+from gutz.ansatz import gibbs, product
+from gutz.batch import CUTOFF_WEIGHT
+from gutz.errors import InputError
+from gutz.fock import local_space
+from gutz.model import Mixture
+from gutz.observables import observe
+from gutz.phases import Phase, label
+from gutz.solution import Solution
+from gutz.status import Status
+
+Array = Any
+
+ANSATZE = ("product",)
+"""Names accepted for `ansatz`."""
+
+CUTOFF_LADDER = {1: (4, 6, 9, 14, 20, 30, 40), 2: (3, 4, 5, 6, 8, 10, 12)}
+"""Cutoffs tried in turn when n_max is automatic; a short list, since each is one compilation."""
+
+_CHORD_STEPS = 2
+
+
+def solve(mixture: Mixture, ansatz: str = "product") -> Solution:
+    """Minimise the variational free energy for every point of `mixture`.
+
+    ansatz: "product" (Gutzwiller, an upper bound). Returns a Solution of the mixture's batch shape. Raises
+    InputError for an unknown ansatz, or under jit where something is left automatic.
+    """
+    precision.check_double()
+    if ansatz not in ANSATZE:
+        raise InputError(f"ansatz is {ansatz!r}; it must be one of: {', '.join(ANSATZE)}")
+    flat = mixture.flat()
+    concrete = flat.map(_number_behind)
+    if any(isinstance(v, jax.core.Tracer) for v in jax.tree.leaves(concrete)):
+        outputs, fields = _solve_inside_jit(flat)
+    else:
+        values = concrete.map(np.asarray)
+        outputs, fields = _solve_numbers(values)
+        if any(isinstance(v, jax.core.Tracer) for v in jax.tree.leaves(flat)):
+            outputs = _attach_derivatives(flat, values, outputs, fields)
+    shaped = {name: v.reshape(mixture.shape + v.shape[1:]) for name, v in outputs.items()}
+    return Solution(mixture, shaped, fields.reshape(mixture.shape + fields.shape[1:]), ansatz)
+
+
+def _number_behind(value: Array) -> Array:
+    """The number a differentiation tracer stands for (inside jit and vmap there is none)."""
+    return jax.lax.stop_gradient(value) if isinstance(value, jax.core.Tracer) else value
+
+
+def _solve_numbers(mixture: Mixture) -> tuple[dict[str, np.ndarray], np.ndarray]:
+    """Choose the cutoff of every point, solve, and label."""
+    size = mixture.shape[0]
+    if mixture.species == 2:
+        gone = limits.collapses(mixture.U, mixture.U12, mixture.n_max)
+    else:
+        gone = np.zeros(size, bool)
+    collector = _Collector(size)
+    todo = np.flatnonzero(~gone)
+    ladder = (mixture.n_max,) if mixture.n_max is not None else CUTOFF_LADDER[mixture.species]
+    wanted = np.zeros(size) if mixture.n_max is not None else _expected_occupation(mixture)
+    for step, n_max in enumerate(ladder):
+        last = step == len(ladder) - 1
+        now = todo if last else todo[wanted[todo] <= n_max - 2]
+        if now.size:
+            outputs, fields = targets.solve_points(mixture[now], n_max=n_max)
+            collector.put(now, outputs, fields, n_max)
+            full = np.zeros(now.size, bool) if last else outputs["cutoff_weight"] > CUTOFF_WEIGHT
+            todo = np.union1d(np.setdiff1d(todo, now), now[full])
+        if not todo.size:
+            break
+    return collector.finish(mixture, gone)
+
+
+def _expected_occupation(mixture: Mixture) -> np.ndarray:
+    """A cheap guess of the largest occupation that matters, to skip cutoffs that cannot do."""
+    if mixture.filling is not None:
+        return np.max(mixture.filling, -1)
+    scale = np.maximum(mixture.U, 1e-12)
+    return np.clip(np.max((mixture.mu + mixture.z_t) / scale, -1), 0.0, 1e3)
+
+
+class _Collector:
+    """Gathers groups of points with different cutoffs into whole arrays."""
+
+    def __init__(self, size: int) -> None:
+        self.size = size
+        self.outputs: dict[str, np.ndarray] = {}
+        self.fields: np.ndarray | None = None
+
+    def put(self, where: np.ndarray, outputs: dict[str, np.ndarray], fields: np.ndarray, n_max: int) -> None:
+        if self.fields is None:
+            self.fields = np.zeros((self.size, *fields.shape[1:]))
+            self.outputs = {
+                k: np.full((self.size, *v.shape[1:]), 0 if v.dtype.kind == "i" else np.nan, v.dtype)
+                for k, v in outputs.items()
+            }
+            self.outputs["n_max"] = np.zeros(self.size, np.int16)
+        self.fields[where] = fields
+        for name, values in outputs.items():
+            self.outputs[name][where] = values
+        self.outputs["n_max"][where] = n_max
+
+    def finish(self, mixture: Mixture, gone: np.ndarray) -> tuple[dict[str, np.ndarray], np.ndarray]:
+        """Add labels and the remarks that follow from the parameters alone."""
+        if self.fields is None:
+            raise InputError("U12 is below -sqrt(U1 U2) at every point; the mixture collapses")
+        out = self.outputs
+        if mixture.species == 2:
+            demixing = (mixture.U12 > np.sqrt(mixture.U[:, 0] * mixture.U[:, 1])) & (mixture.n_max != 1)
+            out["status"] = out["status"] | np.where(demixing, int(Status.DEMIXING), 0).astype(np.int32)
+        out["status"] = np.where(gone, int(Status.COLLAPSE), out["status"]).astype(np.int32)
+        phase = label(out["order_parameter"], out["filling"], out["number_variance"])
+        phase = np.where((out["status"] & int(Status.FILLING_GAP)) > 0, np.int8(Phase.SEPARATED), phase)
+        out["phase"] = np.where(gone, np.int8(Phase.COLLAPSE), phase)
+        return out, self.fields
+
+
+def _solve_inside_jit(mixture: Mixture) -> tuple[dict[str, Array], Array]:
+    """Solve where no numbers can be looked at: everything automatic must have been fixed by the caller."""
+    if mixture.n_max is None or mixture.mu is None or mixture.T is None:
+        raise InputError(
+            "n_max, mu and T must be given inside jax.jit or jax.vmap; an automatic cutoff, a filling or an "
+            "entropy needs the numbers themselves"
+        )
+    raw = targets.solve_given(mixture, mixture.mu, mixture.T, n_max=mixture.n_max, sublattices=mixture.sublattices)
+    outputs = dict(raw.outputs)
+    outputs["status"] = raw.status
+    outputs["n_max"] = jnp.full(raw.status.shape, mixture.n_max, jnp.int16)
+    return outputs, raw.fields
+
+
+def _attach_derivatives(
+    mixture: Mixture, values: Mixture, outputs: dict[str, np.ndarray], fields: np.ndarray
+) -> dict[str, Array]:
+    """Outputs again, as functions of the traced parameters through the implicit functions x, mu and T."""
+    n_max = int(outputs["n_max"].max())
+    mu, T, x = (jnp.asarray(v) for v in (outputs["mu"], outputs["T"], fields))
+    unknown = _unknowns(mixture)
+    total, d_phi = _responses(values, mu, T, x, n_max=n_max)
+    inverse = targets.constraint_inverse(values, np.asarray(total), unknown)
+    traced = _implicit(mixture, values, mu, T, x, d_phi, inverse, n_max=n_max, unknown=unknown)
+    return dict(outputs) | traced
+
+
+@partial(jax.jit, static_argnames=("n_max",))
+def _responses(mixture: Mixture, mu: Array, T: Array, x: Array, *, n_max: int) -> tuple[Array, Array]:
+    space = local_space(n_max, mixture.species)
+    return observe(mixture, mu, T, x, space, differentiable=False)[1:]
+
+
+@partial(jax.jit, static_argnames=("n_max", "unknown"))
+def _implicit(
+    mixture: Mixture,
+    values: Mixture,
+    mu0: Array,
+    T0: Array,
+    x0: Array,
+    d_phi: Array,
+    inverse: Array | None,
+    *,
+    n_max: int,
+    unknown: tuple[int, ...],
+) -> dict[str, Array]:
+    """Chord-Newton steps from the solution (x0, mu0, T0) of `values`, at the traced parameters of `mixture`.
+
+    inverse: of the target conditions, see `targets.constraint_inverse`; d_phi: order parameters per (mu, T).
+    """
+    space = local_space(n_max, mixture.species)
+    p0 = product.sites(values, mu0, T0, space, x0.shape[-2])
+    h = product.hamiltonian(p0, x0, space)
+    chi = gibbs.response(h, jnp.broadcast_to(p0.T[..., None], h.shape[:-2]), jnp.asarray(space.field))
+    ordered = x0 != 0
+    x, mu, T = x0, mu0 if mixture.mu is None else mixture.mu, T0 if mixture.T is None else mixture.T
+    for _ in range(_CHORD_STEPS):
+        p = product.sites(mixture, mu, T, space, x0.shape[-2])
+        r = jnp.where(ordered, product.residual(p, x, space), 0.0)
+        x = x + jnp.where(ordered, product.newton_step(p0, chi, r), 0.0)
+        if unknown:
+            now = observe(mixture, mu, T, x, space, differentiable=True)[0]
+            dy = -jnp.einsum("pij,pj->pi", inverse, targets.mismatch(mixture, now))
+            x = x + jnp.einsum("psay,py->psa", d_phi[..., jnp.array(unknown)], dy) * ordered
+            mu, T = targets.moved(mu, T, dy, unknown, mixture.species)
+    return observe(mixture, mu, T, x, space, differentiable=True)[0]
+
+
+def _unknowns(mixture: Mixture) -> tuple[int, ...]:
+    """Which of y = (mu_1, .., T) are solved for."""
+    chemical = tuple(range(mixture.species)) if mixture.mu is None else ()
+    return chemical + ((mixture.species,) if mixture.T is None else ())
+
