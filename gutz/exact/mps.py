@@ -37,9 +37,10 @@ from gutz.exact.mps_tensors import (
 Matrices = dict[Charge, Floats]
 
 _LANCZOS_STEPS = 12
-# The random start: how far charges may stray from an even filling, and how many states each brings.
-_START_SPREAD = 2.5
+# The start: how far charges may stray from an even filling, how many states each brings, their amplitude.
+_START_SPREAD = 2
 _START_STATES = 3
+_START_NOISE = 0.02
 
 
 @dataclass(frozen=True, eq=False)
@@ -261,6 +262,15 @@ def _truncate(theta: Matrices, max_bond: int, cutoff: float) -> tuple[Matrices, 
 # --- sweeps -------------------------------------------------------------------------------------------------
 
 
+def _even_filling(N: Charge, sites: int) -> list[Charge]:
+    """Occupation of each site: every species spread as evenly as whole atoms allow, interleaved."""
+    rows = []
+    for a, atoms in enumerate(N):
+        steps = np.diff(np.arange(sites + 1) * atoms // sites)
+        rows.append(np.roll(steps, a * max(1, sites // max(1, 2 * atoms))))
+    return [tuple(int(x) for x in column) for column in np.array(rows).T]
+
+
 class _Sweeper:
     """Both stacks of sides, and the wavefunction on the current bond."""
 
@@ -277,30 +287,39 @@ class _Sweeper:
         self.tensors: tuple[dict[int, SiteTensor], dict[int, SiteTensor]] = ({}, {})
         # What one half-sweep enlarges on its way the next one meets again, unchanged, on its way back.
         self.waiting: tuple[dict[int, _Enlarged], dict[int, _Enlarged]] = ({}, {})
-        self.theta = self._random_start(np.random.default_rng(seed))
+        self.theta = self._start(np.random.default_rng(seed))
 
-    def _random_start(self, rng: np.random.Generator) -> Matrices:
-        """Random right side of every bond, and a random wavefunction on the first.
+    def _start(self, rng: np.random.Generator) -> Matrices:
+        """Right side of every bond, and a wavefunction on the first: an even filling plus random states.
 
-        A few states of every charge near that of an even filling: a product state would leave atoms that
-        cannot hop where it happened to put them.
+        The random ones, a few for every charge near the even one, let sweeps reach arrangements of atoms that
+        hop slowly or not at all, which a product state would leave where it happened to put them.
         """
+        filling = _even_filling(self.total, self.sites)
+        charge = (0,) * self.model.species
         for i in range(self.sites - 1, 0, -1):
             enlarged = self.enlarged(1, i)
-            even = np.array(self.total) * (self.sites - i) / self.sites
-            distance = {q: np.abs(np.array(q) - even).max() for q in enlarged.sizes}
-            reach = max(_START_SPREAD, min(distance.values()))
+            place = enlarged.fusion[add(charge, filling[i])][self.space.physical.index(filling[i]), charge]
+            charge = add(charge, filling[i])
             kept = {}
             for q, rows in enlarged.sizes.items():
-                if distance[q] <= reach:
-                    kept[q] = np.linalg.qr(rng.normal(size=(rows, min(rows, _START_STATES))))[0]
+                if np.abs(np.subtract(q, charge)).max() <= _START_SPREAD:
+                    columns = rng.normal(size=(rows, min(rows, _START_STATES)))
+                    if q == charge:
+                        # The first state of this sector is, bond after bond, the even filling.
+                        columns[:, 0] = 0.0
+                        columns[place.start, 0] = 1.0
+                    kept[q] = np.linalg.qr(columns)[0]
             if i > 1:
                 self.store(1, i, enlarged, kept)
         theta = {}
         for q, rows in self.enlarged(0, 0).sizes.items():
             right = kept.get(subtract(self.total, q))
             if right is not None:
-                theta[q] = rng.normal(size=(rows, right.shape[1])) @ right.T
+                random = rng.normal(size=(rows, right.shape[1]))
+                theta[q] = _START_NOISE * random @ right.T
+                if q == filling[0]:
+                    theta[q] += right[:, 0]
         return theta
 
     def enlarged(self, end: int, i: int) -> _Enlarged:
@@ -404,7 +423,7 @@ def ground_state(
         cutoff: weight that may be cut at a bond even below max_bond.
         tolerance: relative change of the energy over a sweep that counts as settled.
         max_sweeps: sweeps (there and back) before giving up; the result then says converged = False.
-        seed: of the random state to start from.
+        seed: of the random part of the starting state.
 
     The bond dimension doubles from sweep to sweep up to max_bond. How far the result is from an eigenstate:
     look at `discarded` and `variance`, and at a larger max_bond. Which eigenstate: with hoppings of very
