@@ -13,13 +13,12 @@ import sys
 import tempfile
 import traceback
 from collections.abc import Callable, Sequence
-from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 from typing import Any
 
 import click
 
-from gutz import cache
+from gutz import __version__, cache
 from gutz.errors import GutzError
 
 INTERNAL_ERROR = 70
@@ -46,13 +45,6 @@ _FORCE = click.option("--force", is_flag=True, help="Replace what is in the outp
 _DEBUG = click.option("--debug", is_flag=True, help="Show the full traceback of an error.")
 
 
-def _version() -> str:
-    try:
-        return version("gutz")
-    except PackageNotFoundError:
-        return "(source tree)"
-
-
 def _out(help_text: str) -> Callable[[Any], Any]:
     return click.option("--out", metavar="DIR", help=help_text)
 
@@ -70,7 +62,7 @@ def _example(text: str) -> str:
     ),
     context_settings={"help_option_names": ["-h", "--help"]},
 )
-@click.version_option(_version(), "--version", message="gutz %(version)s")
+@click.version_option(__version__, "--version", message="gutz %(version)s")
 def cli() -> None:
     """Collect the commands."""
 
@@ -217,7 +209,7 @@ def _report_internal(error: Exception) -> str:
     try:
         handle, name = tempfile.mkstemp(prefix="gutz-error-", suffix=".txt")
         with os.fdopen(handle, "w", encoding="utf-8") as file:
-            file.write(f"gutz {_version()}\n")
+            file.write(f"gutz {__version__}\n")
             traceback.print_exception(error, file=file)
     except OSError:
         return f"internal error ({kind}); run again with --debug to see where, and please report it"

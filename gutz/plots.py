@@ -36,6 +36,7 @@ _KINDS = [*Phase]
 _WORDS = {int(phase): WORDS[phase] for phase in Phase}
 _COLOURS = {int(phase): colour for phase, colour in style.PHASE_COLOURS.items()}
 _LEGEND_COLUMNS = 3
+_NO_LABEL = -99
 _PANEL_WIDTH, _PANEL_HEIGHT = 3.5, 2.9
 
 
@@ -375,7 +376,16 @@ def _name_regions(
             across, up = labels.pixel_grid(panel)
             codes = part["phase"].transpose(axes[1], axes[0]).values
             pixels = codes[np.ix_(_cells(part[axes[1]].values, up), _cells(part[axes[0]].values, across))]
-            small |= set(labels.place(panel, pixels, _WORDS, _COLOURS))
+            bad = _untrusted(part.transpose(axes[1], axes[0], ...))
+            hatched = bad[np.ix_(_cells(part[axes[1]].values, up), _cells(part[axes[0]].values, across))]
+            # Names keep clear of hatching; a phase that is hatched all over gets its name on top of it.
+            clear = np.where(hatched, _NO_LABEL, pixels)
+            left = {
+                *labels.place(panel, clear, _WORDS, _COLOURS),
+                *(set(np.unique(pixels)) - set(np.unique(clear))),
+            }
+            covered = np.where(np.isin(pixels, [*left]), pixels, _NO_LABEL)
+            small |= set(labels.place(panel, covered, _WORDS, _COLOURS))
         return sorted(small)
 
     _name_with_legend(figure, [*grid[0]], caption, attempt)

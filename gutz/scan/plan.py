@@ -26,11 +26,11 @@ from gutz.units import BOLTZMANN, PLANCK, parse_quantity, to_si
 
 Array = NDArray[np.float64]
 
-CHUNK_POINTS = 10_000
-"""Most points in one chunk: one unit of work, one file per variable."""
+CHUNK_POINTS = (256, 4096)
+"""Most points in one chunk (one unit of work, one file per variable) of a small and of a large run. The solver
+pads every call to one of these sizes, so others would waste its time."""
 FEWEST_CHUNKS = 8
-"""A run is cut into about this many chunks at least, so that stopping loses little and progress is seen."""
-SMALLEST_CHUNK = 256
+"""A run is large if it makes this many large chunks: stopping then loses little and progress is seen."""
 
 CHECKED_POINTS = 200_000
 """The physics of larger grids is checked on a coarser grid with the same ends."""
@@ -154,7 +154,8 @@ def at(full: Plan, values: Mapping[str, float]) -> Plan:
 def chunk_shape(shape: tuple[int, ...]) -> tuple[int, ...]:
     """Split a grid into even chunks: whole last axes together, neighbours side by side, sizes bounded."""
     points = math.prod(shape)
-    room = min(CHUNK_POINTS, max(SMALLEST_CHUNK, points // FEWEST_CHUNKS))
+    small, large = CHUNK_POINTS
+    room = large if points >= FEWEST_CHUNKS * large else small
     chunk: list[int] = []
     for n in reversed(shape):
         pieces = -(-n // max(1, min(n, room)))

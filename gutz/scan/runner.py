@@ -24,7 +24,9 @@ import zarr
 from filelock import FileLock, Timeout
 
 from gutz.errors import InputError, OutputError, ResourceError
+from gutz.limits import collapses
 from gutz.model import Mixture
+from gutz.phases import Phase
 from gutz.scan import document, paths, schema, spec, store
 from gutz.scan.plan import Plan, check_physics, plan
 from gutz.solver import solve
@@ -121,24 +123,34 @@ def run(
 
 
 def compute_chunk(full: Plan, index: Sequence[int]) -> dict[str, Any]:
-    """Solve one chunk; arrays of the full chunk shape for every variable of the run.
-
-    A chunk may lie wholly beyond collapse: the run as a whole has been checked, so such points get their
-    status from the solver and not an error from the model.
-    """
+    """Solve one chunk; arrays of the full chunk shape for every variable of the run."""
     picked = full.picked(index)
     found = full.lattice(picked)
     settings = full.settings(picked, found)
     U12 = np.asarray(settings["U12"])
+    # The model refuses a mixture that collapses at every point; here that may be true of one chunk of many.
     mixture = Mixture(**{**settings, "U12": np.zeros(U12.shape)})
     mixture = mixture.replace(U12=np.broadcast_to(U12, mixture.shape))
-    solution = solve(mixture, ansatz=full.spec.ansatz.kind)
     values: dict[str, Any] = {"t": mixture.t, "U": mixture.U, "U12": mixture.U12}
     if found is not None:
         values["cautions"] = np.broadcast_to(found.flags, mixture.shape)
-    for name in schema.layout(full):
-        if name not in values:
-            values[name] = np.asarray(getattr(solution, name))
+    names = [name for name in schema.layout(full) if name not in values]
+    if full.spec.species == 2 and np.all(collapses(mixture.U, mixture.U12, mixture.n_max)):
+        return values | _collapsed(full, names)
+    solution = solve(mixture, ansatz=full.spec.ansatz.kind)
+    return values | {name: np.asarray(getattr(solution, name)) for name in names}
+
+
+def _collapsed(full: Plan, names: Sequence[str]) -> dict[str, Any]:
+    """Outputs of a chunk in which nothing can be solved: no numbers, and the status that says why."""
+    fields, sizes = schema.layout(full), schema.sizes(full)
+    values: dict[str, Any] = {}
+    for name in names:
+        trailing = fields[name].dims[len(full.chunk) :]
+        shape = (*full.chunk, *(sizes[dim] for dim in trailing))
+        values[name] = np.full(shape, np.nan if fields[name].dtype == "float64" else 0, fields[name].dtype)
+    values["status"][...] = int(Status.COLLAPSE)
+    values["phase"][...] = int(Phase.COLLAPSE)
     return values
 
 

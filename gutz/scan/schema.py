@@ -24,6 +24,10 @@ NOT_COMPUTED = -1
 """Status of a point whose chunk has not been written."""
 
 
+ABSENT = {"product": ("dressing",)}
+"""Outputs that an ansatz does not have."""
+
+
 class Field(NamedTuple):
     """One array. dims: all its dimensions; dtype: numpy name; attributes: units, names, flags."""
 
@@ -94,7 +98,7 @@ def layout(plan: Plan) -> dict[str, Field]:
         elif name == "status":
             attributes |= _flags(Status, variable.long_name)
         found[name] = Field((*grid, *variable.dims), variable.dtype, attributes)
-    for name in grid:
+    for name in (*grid, *ABSENT.get(plan.spec.ansatz.kind, ())):
         found.pop(name, None)
     status = found.pop("status")
     return {**found, "status": status}

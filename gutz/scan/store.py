@@ -13,7 +13,7 @@ import shutil
 import warnings
 from collections.abc import Mapping, Sequence
 from datetime import UTC, datetime
-from importlib.metadata import PackageNotFoundError, version
+from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
@@ -22,6 +22,7 @@ import xarray as xr
 import zarr
 from zarr.codecs import ZstdCodec
 
+from gutz import __version__
 from gutz.errors import DataError, OutputError
 from gutz.scan import schema
 from gutz.scan.document import Document
@@ -213,7 +214,7 @@ def _provenance(plan: Plan, document: Document, tolerances: Mapping[str, float])
     return {
         "Conventions": "CF-1.11",
         "title": spec.output.title or document.name.removesuffix(".toml"),
-        "source": f"gutz {_version('gutz')}",
+        "source": f"gutz {__version__}",
         "created": datetime.now(UTC).isoformat(timespec="seconds"),
         "schema_version": schema.VERSION,
         "ansatz": spec.ansatz.kind,
@@ -222,7 +223,7 @@ def _provenance(plan: Plan, document: Document, tolerances: Mapping[str, float])
         "energy_unit": plan.energy_unit,
         "energy_unit_means": recoil_words(plan) or plan.energy_unit,
         "tolerances": dict(tolerances),
-        "versions": {name: _version(name) for name in ("jax", "numpy", "scipy", "xarray", "zarr")},
+        "versions": {name: version(name) for name in ("jax", "numpy", "scipy", "xarray", "zarr")},
         "config_name": document.name,
         "config_toml": document.text,
         "config_overrides": list(document.overrides),
@@ -233,14 +234,6 @@ def _provenance(plan: Plan, document: Document, tolerances: Mapping[str, float])
         "chunk": list(plan.chunk),
         "variables": [*schema.layout(plan)],
     }
-
-
-def _version(package: str) -> str:
-    """Version of an installed package, without importing it; a source tree on the path has none."""
-    try:
-        return version(package)
-    except PackageNotFoundError:
-        return "(source tree)"
 
 
 def _open_group(path: Path) -> zarr.Group:

@@ -91,7 +91,14 @@ def test_lines_are_found():
 
 @pytest.mark.parametrize(
     "text, value",
-    [("0.25", 0.25), ("[1, 2]", [1, 2]), ("1064 nm", "1064 nm"), ('"1064 nm"', "1064 nm"), ("0,1", "0,1"), ("true", True)],
+    [
+        ("0.25", 0.25),
+        ("[1, 2]", [1, 2]),
+        ("1064 nm", "1064 nm"),
+        ('"1064 nm"', "1064 nm"),
+        ("0,1", "0,1"),
+        ("true", True),
+    ],
 )
 def test_overrides_take_toml_or_text(text, value):
     found = document.parse(GOOD, "x.toml", [f"mixture.T={text}", "axes.mu.points=4"])
@@ -100,7 +107,9 @@ def test_overrides_take_toml_or_text(text, value):
     assert found.where("mixture.T") == "from --set"
 
 
-@pytest.mark.parametrize("override", ["T=1", "mixture.T", "mixture.=1", "mix ture.T=1", "mixture.U.x=1", "a.b=" + "1" * 2000])
+@pytest.mark.parametrize(
+    "override", ["T=1", "mixture.T", "mixture.=1", "mix ture.T=1", "mixture.U.x=1", "a.b=" + "1" * 2000]
+)
 def test_bad_overrides_are_refused(override):
     with pytest.raises(InputError, match="--set"):
         document.parse(GOOD, "x.toml", [override])

@@ -39,7 +39,12 @@ ARRAYS = DTYPES.flatmap(
 )
 
 
-@settings(max_examples=40, derandomize=True, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@settings(
+    max_examples=40,
+    derandomize=True,
+    deadline=None,
+    suppress_health_check=[HealthCheck.function_scoped_fixture],
+)
 @given(array=ARRAYS, name=NAMES, attributes=ATTRIBUTES)
 def test_round_trip_is_exact(tmp_path, array, name, attributes):
     dims = tuple(f"d{i}" for i in range(array.ndim))

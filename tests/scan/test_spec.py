@@ -82,7 +82,11 @@ def test_messages_name_key_value_and_rule(text, overrides, expected):
 
 def test_missing_settings_are_named():
     message = refusal("[mixture]\nT = 0.1\n")
-    for words in ("neither mu nor filling is given", "mixture.t (near line 1): is missing", "mixture.U (near line 1): is missing"):
+    for words in (
+        "neither mu nor filling is given",
+        "mixture.t (near line 1): is missing",
+        "mixture.U (near line 1): is missing",
+    ):
         assert words in message
     message = refusal('[lattice]\natoms = ["87Rb", "41K"]\n[mixture]\nmu = "0.3 U1"\n')
     for key in ("wavelength", "depth", "a11", "a22", "a12"):
@@ -183,7 +187,9 @@ def test_differences_name_every_changed_setting():
 def test_five_axes_are_the_most():
     axis = '[axes.{name}]\nparameter = "{parameter}"\nvalues = [0.1, 0.2]\n'
     names = ["mixture.t", "mixture.U", "mixture.U12", "mixture.mu", "mixture.T", "mixture.offset"]
-    text = "[mixture]\nn_max = 3\n" + "".join(axis.format(name="abcdef"[i], parameter=p) for i, p in enumerate(names))
+    text = "[mixture]\nn_max = 3\n" + "".join(
+        axis.format(name="abcdef"[i], parameter=p) for i, p in enumerate(names)
+    )
     assert "there are 6 axes; at most 5" in refusal(text)
     assert check(text.rpartition("[axes")[0]).points == 32
 

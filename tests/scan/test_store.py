@@ -30,7 +30,9 @@ def finished(quick, mixture_file, tmp_path):
 
 
 def pieces(folder):
-    return sorted(path for path in (folder / "data.zarr").rglob("*") if path.is_file() and path.name != "zarr.json")
+    return sorted(
+        path for path in (folder / "data.zarr").rglob("*") if path.is_file() and path.name != "zarr.json"
+    )
 
 
 def same_bytes(a, b):
@@ -171,7 +173,12 @@ def test_runs_that_cannot_be_read_are_explained(tmp_path, finished, what):
         (target / "data.zarr/zarr.json").write_text(json.dumps(description))
     with pytest.raises(DataError) as caught:
         open_run(target)
-    words = {"nothing": "does not exist", "empty store": "does not exist", "other store": "not written by gutz", "newer": "newer gutz"}
+    words = {
+        "nothing": "does not exist",
+        "empty store": "does not exist",
+        "other store": "not written by gutz",
+        "newer": "newer gutz",
+    }
     assert words[what] in str(caught.value)
 
 
@@ -207,7 +214,9 @@ def start(path, out, seconds="0.15"):
     environment = {**os.environ, "STANDIN_SECONDS": seconds, "PYTHONPATH": os.pathsep.join(sys.path)}
     with path.with_suffix(".errors").open("w") as errors:
         return subprocess.Popen(
-            [sys.executable, "-c", DRIVER.format(here=str(HERE)), str(path), str(out)], env=environment, stderr=errors
+            [sys.executable, "-c", DRIVER.format(here=str(HERE)), str(path), str(out)],
+            env=environment,
+            stderr=errors,
         )
 
 
