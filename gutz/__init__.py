@@ -1,4 +1,4 @@
-"""`gutz`: where paired, counterflow and ordinary superfluids of two-species lattice bosons are, and what they look like.
+"""`gutz`: where the superfluids of two-species lattice bosons are, how much heat they bear, what they look like.
 
 The public names load on first use, so that importing the package (and the command line) stays fast. Importing it
 switches jax to 64-bit numbers: thermal free energies at low temperature lose all digits otherwise.

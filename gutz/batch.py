@@ -75,9 +75,7 @@ def evaluate(mixture: Mixture, mu: Array, T: Array, fields: Array, converged: Ar
     return Batch(fields, outputs, response, order_response, status)
 
 
-def global_minimum(
-    mixture: Mixture, mu: Array, T: Array, *, n_max: int, sublattices: int
-) -> tuple[Array, Array]:
+def global_minimum(mixture: Mixture, mu: Array, T: Array, *, n_max: int, sublattices: int) -> tuple[Array, Array]:
     """Best of several descents and of the state without order; (point, sublattice, species), converged.
 
     Both species ordered, each alone ordered (the other then only labels blocks, which is cheap), none ordered.
@@ -99,9 +97,7 @@ def global_minimum(
 
 
 @partial(jax.jit, static_argnames=("n_max", "sublattices"))
-def _prepare(
-    mixture: Mixture, mu: Array, T: Array, *, n_max: int, sublattices: int
-) -> tuple[Sites, Array]:
+def _prepare(mixture: Mixture, mu: Array, T: Array, *, n_max: int, sublattices: int) -> tuple[Sites, Array]:
     space = local_space(n_max, mixture.species)
     p = product.sites(mixture, mu, T, space, sublattices)
     start = _large_fields(p, mixture, space)[:, None, :]
@@ -121,9 +117,7 @@ def _each_alone(p: Sites, start: Array) -> tuple[Sites, Array, Array, Array]:
 
 
 @jax.jit
-def _take_alone(
-    x: Array, F: Array, converged: Array, axis: descent.Minimum
-) -> tuple[Array, Array, Array, Array]:
+def _take_alone(x: Array, F: Array, converged: Array, axis: descent.Minimum) -> tuple[Array, Array, Array, Array]:
     """Replace minima by lower ones with one species alone; the last array marks where."""
     size = F.shape[0]
     alone = jnp.zeros(size, bool)
@@ -146,9 +140,7 @@ def _ask_other(x: Array, alone: Array) -> tuple[Array, Array]:
 
 
 @jax.jit
-def _take_joint(
-    x: Array, F: Array, alone: Array, todo: Array, joint: descent.Minimum
-) -> tuple[Array, Array]:
+def _take_joint(x: Array, F: Array, alone: Array, todo: Array, joint: descent.Minimum) -> tuple[Array, Array]:
     lower = joint.converged & (joint.free_energy < F[todo] - _tie(F[todo])) & alone[todo]
     x = x.at[todo].set(jnp.where(lower[:, None, None], joint.x, x[todo]))
     return x, F.at[todo].set(jnp.where(lower, joint.free_energy, F[todo]))

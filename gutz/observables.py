@@ -122,9 +122,7 @@ def _total_response(p: Sites, chi: Array, species: int) -> tuple[Array, Array]:
     field = chi[..., :species, :species]
     mixed = chi[..., :species, species:]
     own = chi[..., species:, species:]
-    columns = [
-        product.newton_step(p, field, -0.5 * mixed[..., :, :, y]) for y in range(mixed.shape[-1])
-    ]
+    columns = [product.newton_step(p, field, -0.5 * mixed[..., :, :, y]) for y in range(mixed.shape[-1])]
     d_phi = jnp.stack(columns, axis=-1)
     J = p.z_t[..., None, :, None] * d_phi[..., ::-1, :, :]
     total = own + jnp.swapaxes(mixed, -1, -2) @ J

@@ -20,5 +20,5 @@ jax.config.update("jax_enable_x64", True)
 
 def check_double() -> None:
     """Refuse to compute where the caller has switched 64-bit numbers off since the import."""
-    if not jax.config.jax_enable_x64:
+    if jax.numpy.zeros(()).dtype != jax.numpy.float64:
         raise InputError("jax_enable_x64 is False; gutz needs 64-bit numbers: leave it on while gutz computes")

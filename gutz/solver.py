@@ -204,4 +204,3 @@ def _unknowns(mixture: Mixture) -> tuple[int, ...]:
     """Which of y = (mu_1, .., T) are solved for."""
     chemical = tuple(range(mixture.species)) if mixture.mu is None else ()
     return chemical + ((mixture.species,) if mixture.T is None else ())
-

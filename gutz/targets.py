@@ -18,12 +18,16 @@ import numpy as np
 from gutz.batch import LANES, Batch, solve_batch
 from gutz.model import Mixture
 from gutz.status import Status
+from gutz.variables import VARIABLES
 
 Array = Any
 Numbers = dict[str, np.ndarray]
 
 BATCH_SIZES = (8, LANES, 4096)
 """Every call is padded to one of these, so that few shapes are ever compiled."""
+
+DIRECTED = tuple(name for name, variable in VARIABLES.items() if "direction" in variable.dims)
+"""Outputs whose last axis is the direction."""
 
 TARGET_TOLERANCE = 1e-10
 """Mismatch of filling (relative to 1 + n) and entropy per particle at which a target counts as met."""
@@ -68,7 +72,10 @@ class _Evaluator:
     """Global solves of chosen points at trial values of mu and T, as numpy arrays, in padded batches."""
 
     def __init__(self, mixture: Mixture, n_max: int) -> None:
-        self.mixture = mixture.replace(filling=None, entropy=None, mu=None, T=None)
+        # Missing directions are directions without hopping: one compilation serves 1D, 2D and 3D.
+        missing = [(0, 0), (0, 0), (0, 3 - mixture.dim)]
+        self.mixture = mixture.replace(filling=None, entropy=None, mu=None, T=None, t=np.pad(mixture.t, missing), dim=3)
+        self.dim = mixture.dim
         self.n_max = n_max
         self.sublattices = mixture.sublattices
 
@@ -82,7 +89,10 @@ class _Evaluator:
             index = np.concatenate([np.arange(begin, begin + count), np.full(padded - count, begin + count - 1)])
             chosen = self.mixture[where[index]]
             batch = solve_batch(chosen, mu[index], T[index], n_max=self.n_max, sublattices=self.sublattices)
-            parts.append(jax.tree.map(lambda v, count=count: np.asarray(v)[:count], batch))
+            batch = jax.tree.map(lambda v, count=count: np.asarray(v)[:count], batch)
+            for name in DIRECTED:
+                batch.outputs[name] = batch.outputs[name][..., : self.dim]
+            parts.append(batch)
         if len(parts) == 1:
             return parts[0]
         return jax.tree.map(lambda *v: np.concatenate(v), *parts)
@@ -293,9 +303,7 @@ def mismatch(mixture: Mixture, outputs: dict[str, Array]) -> Array:
     return jnp.concatenate(parts, -1)
 
 
-def constraint_inverse(
-    mixture: Mixture, response: np.ndarray, unknown: tuple[int, ...]
-) -> Array | None:
+def constraint_inverse(mixture: Mixture, response: np.ndarray, unknown: tuple[int, ...]) -> Array | None:
     """Inverse of d mismatch / d(unknowns) at the solution; None where nothing is solved for.
 
     Pseudo-inverse: along a plateau nothing constrains mu, and mu then does not follow the parameters.

@@ -80,14 +80,13 @@ def _look(p: Sites, x: Array, space: LocalSpace) -> _Look:
 
 
 @partial(jax.jit, static_argnames=("n_max", "lanes"))
-def descend(
-    p: Sites, point: Array, start: Array, count: Array, *, n_max: int, lanes: int
-) -> Minimum:
+def descend(p: Sites, point: Array, start: Array, count: Array, *, n_max: int, lanes: int) -> Minimum:
     """Minimise from every start in the queue.
 
     p: parameters of N points, with p.energy of shape (N, sublattice, state), or (N, sublattice, block, state)
-    where only one species has fields and the other's occupation labels the blocks. point: index of the point of each job, (job,). start: (job, sublattice, species);
-    a field that starts at exactly 0 stays 0. count: jobs in use, the rest of the queue is padding.
+    where only one species has fields and the other's occupation labels the blocks. point: index of the point of
+    each job, (job,). start: (job, sublattice, species); a field that starts at exactly 0 stays 0. count: jobs in
+    use, the rest of the queue is padding.
     """
     species = p.z_t.shape[-1]
     space = local_space(n_max, species)

@@ -41,9 +41,7 @@ class Levels(NamedTuple):
 def levels(h: Array, T: Array) -> Levels:
     """Eigensystem, Boltzmann weights, free energy and entropy; for values only, not to be differentiated."""
     lv = block_levels(h[..., None, :, :], T)
-    return lv._replace(
-        energy=lv.energy[..., 0, :], vectors=lv.vectors[..., 0, :, :], weight=lv.weight[..., 0, :]
-    )
+    return lv._replace(energy=lv.energy[..., 0, :], vectors=lv.vectors[..., 0, :, :], weight=lv.weight[..., 0, :])
 
 
 def block_levels(h: Array, T: Array) -> Levels:
@@ -51,6 +49,7 @@ def block_levels(h: Array, T: Array) -> Levels:
 
     energy, weight: (..., block, level); the weights of all blocks together sum to 1.
     """
+    T = jnp.asarray(T)
     energy, vectors = jnp.linalg.eigh(h, symmetrize_input=False)[:2]
     warm = T > 0
     beta = jnp.where(warm, 1.0 / jnp.where(warm, T, 1.0), 0.0)
@@ -149,9 +148,7 @@ def _second_divided_difference(lv: Levels, first: Array) -> Array:
     mid = i + j + k - low - high
     width = E[..., high] - E[..., low]
     apart = width > 0
-    quotient = jnp.where(
-        apart, (first[..., mid, high] - first[..., low, mid]) / jnp.where(apart, width, 1.0), 0.0
-    )
+    quotient = jnp.where(apart, (first[..., mid, high] - first[..., low, mid]) / jnp.where(apart, width, 1.0), 0.0)
     u, v = (E[..., mid] - E[..., low]) * beta, width * beta
     # Close levels: expand about the lowest; h_n(0, u, v) are complete homogeneous polynomials.
     power, homogeneous, coefficient, series = jnp.ones_like(u), jnp.ones_like(u), 0.5, 0.5 * jnp.ones_like(u)
@@ -192,9 +189,7 @@ def _second(h: Array, T: Array, A: Array, B: Array) -> Array:
     a, b = _to_levels(lv, A), _to_levels(lv, B)
     first_a, first_b = kernel * a, kernel * b
     third = _second_divided_difference(lv, kernel)
-    second = jnp.einsum("...ijk,...ij,...jk->...ik", third, a, b) + jnp.einsum(
-        "...ijk,...ij,...jk->...ik", third, b, a
-    )
+    second = jnp.einsum("...ijk,...ij,...jk->...ik", third, a, b) + jnp.einsum("...ijk,...ij,...jk->...ik", third, b, a)
     trace_a, trace_b, trace_ab = _trace(first_a), _trace(first_b), _trace(second)
     weights = _diagonal_matrix(lv.weight)
     inner = (
