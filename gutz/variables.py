@@ -42,7 +42,7 @@ VARIABLES: dict[str, Variable] = {
     "coherence": Variable((*_S, "direction"), "1", "Nearest-neighbour coherence", "<b_a† b_a> on a bond"),
     "stiffness": Variable((*_SS, "direction"), ENERGY, "Superfluid stiffness", "d2F/dtheta_a dtheta_b per site"),
     "staggering": Variable(_S, "1", "Sublattice density difference", "half the filling of A minus B sites"),
-    "dressing": Variable((), "1", "Size of the second-order term", "relative to the first-order one; trust it if small"),
+    "dressing": Variable((), "1", "Size of the second-order term", "relative to the first-order one"),
     "n_max": Variable((), "1", "Occupation cutoff", "largest number of atoms of one species kept on a site", "int16"),
     "cutoff_weight": Variable((), "1", "Weight at the cutoff", "probability of the highest occupation kept"),
     "residual": Variable((), "1", "Residual", "largest mismatch of the self-consistency conditions"),

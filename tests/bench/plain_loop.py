@@ -53,15 +53,22 @@ def _thermal(E: Vector, T: float) -> tuple[Vector, Vector]:
 
 
 def loop(
-    energy: Vector, zt: Vector, T: float, n_max: int, tolerance: float = 1e-10, most: int = 20000
+    energy: Vector,
+    zt: Vector,
+    T: float,
+    n_max: int,
+    tolerance: float = 1e-10,
+    most: int = 20000,
+    start: tuple[float, float] = (1.0, 0.9),
 ) -> tuple[Vector, Vector, int]:
-    """Point by point, each started from the point before. Returns phi (points, 2), F (points,), eigenproblems."""
+    """Point by point, the first from `start`, each other from the point before. Returns phi (points, 2), F (points,), eigenproblems."""
     b1, b2, _, _ = PlainSite(n_max).operators
     f1, f2 = b1 + b1.T, b2 + b2.T
-    phi = np.array([1.0, 0.9])
+    phi = np.array(start)
     phis, Fs, count = np.empty_like(zt), np.empty(len(zt)), 0
     for i in range(len(zt)):
-        phi = np.maximum(phi, 0.1)
+        if i:
+            phi = np.maximum(phi, 0.1)
         h0 = np.diag(energy[i])
         for _ in range(most):
             J = zt[i] * phi
@@ -74,7 +81,7 @@ def loop(
             if change < tolerance:
                 break
         phis[i] = phi
-        Fs[i] = F + (zt[i] * phi**2).sum()
+        Fs[i] = F + (2 * J * phi - zt[i] * phi**2).sum()
     return phis, Fs, count
 
 
@@ -98,7 +105,7 @@ def stacked(
         new = np.stack([0.5 * ((V * (f @ V)).sum(1) * weight).sum(1) for f in fields], axis=1)
         change = np.abs(new - phi[active]).max(1)
         phi[active] = new
-        F[active] = trial + (zt[active] * new**2).sum(1)
+        F[active] = trial + (2 * J * new - zt[active] * new**2).sum(1)
         active = active[change >= tolerance]
         if not len(active):
             break
