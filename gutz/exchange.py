@@ -228,18 +228,19 @@ def _isolation(mixture: Mixture, states: tuple[State, ...]) -> tuple[Array, Arra
     below = _below(mixture, s)
     gap = jnp.where(s.same, -below, jnp.inf).min((-1, -2), initial=jnp.inf)
     largest = amplitude.max((-1, -2, -3), initial=0.0)
+    distant = s.same & ~(np.abs(s.hop) > 0).any(0)
+    if not distant.any():
+        return gap, largest
+    floor = jnp.asarray(mixture.t).max((-1, -2))[..., None, None]
     exchange = (amplitude * jnp.abs(hop)).max((-1, -2, -3), initial=0.0)
-    floor = jnp.asarray(mixture.t).max((-1, -2))
-    direct = (jnp.abs(s.hop) > 0).any(0)
-    inverse = jnp.abs(_inverse(below, floor[..., None, None]))
-    distant = jnp.where(s.same & ~direct, inverse, 0.0).max((-1, -2), initial=0.0)
-    return gap, jnp.maximum(largest, exchange * distant)
+    inverse = jnp.where(distant, jnp.abs(_inverse(below, floor)), 0.0).max((-1, -2))
+    return gap, jnp.maximum(largest, exchange * inverse)
 
 
 def _inverse(x: Array, floor: Array) -> Array:
     """1/x, with |x| raised to `floor` where it is smaller: exact elsewhere, finite everywhere."""
     x = jnp.asarray(x)
-    floor = jnp.maximum(floor, jnp.finfo(jnp.float64).tiny ** 0.25)
+    floor = jnp.maximum(floor, _SMALLEST)
     return 1.0 / jnp.where(jnp.abs(x) < floor, jnp.where(x < 0, -floor, floor), x)
 
 
