@@ -107,7 +107,7 @@ def lattice(**options: Any) -> int:
 @_DEBUG
 def solve(**options: Any) -> int:
     """One point."""
-    _keep_compiled_code(quiet=options["quiet"])
+    _load_numerics(quiet=options["quiet"])
     from gutz.commands import solve as command
 
     return command.run(**options)
@@ -132,7 +132,7 @@ def solve(**options: Any) -> int:
 @_DEBUG
 def scan(**options: Any) -> int:
     """A whole scan."""
-    _keep_compiled_code(quiet=options["quiet"])
+    _load_numerics(quiet=options["quiet"])
     from gutz.commands import scan as command
 
     return command.run(**options)
@@ -157,11 +157,15 @@ def check(**options: Any) -> int:
     return command.run(**options)
 
 
-def _keep_compiled_code(quiet: bool) -> None:
-    """Switch the cache of compiled code on; this must come before jax is loaded."""
+def _load_numerics(quiet: bool) -> None:
+    """Load jax, with its cache of compiled code and 64-bit numbers switched on."""
     problem = cache.enable()
     if problem and not quiet:
         click.echo(f"note: {problem}", err=True)
+    # First of the numerics: it reads the environment before jax does, and refuses 32 bits in one sentence.
+    from gutz import precision
+
+    precision.check_double()
 
 
 def main(arguments: Sequence[str] | None = None) -> None:
@@ -188,8 +192,9 @@ def _run(given: list[str]) -> int:
             traceback.print_exc()
         _say(str(error))
         return error.exit_code
-    except BrokenPipeError:
-        # The reader of our output has gone; what is still buffered must not raise again at exit.
+    except SystemExit:
+        # What click and rich do when the reader of our output has gone: no mistake, and no result to speak of.
+        # What is still buffered must not raise again at exit.
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return 0
     except Exception as error:

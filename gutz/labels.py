@@ -19,9 +19,7 @@ MARGIN = 4
 """Pixels kept free around a name."""
 
 
-def place(
-    axes: Axes, pixels: NDArray[np.integer], words: Mapping[int, str], colours: Mapping[int, str]
-) -> list[int]:
+def place(axes: Axes, pixels: NDArray[np.integer], words: Mapping[int, str], colours: Mapping[int, str]) -> list[int]:
     """Write a name into every region of `pixels`, shape (row, column), first row at the bottom of the axes.
 
     words, colours: by label; labels without words stay unnamed. Returns those whose regions are too small.

@@ -9,7 +9,8 @@ at their middle values, which the caption says. Points not to be trusted are hat
 
 import math
 import warnings
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
@@ -50,7 +51,7 @@ def draw(dataset: xr.Dataset, name: str) -> Figure:
         raise InputError(f'"{name}" is not in this run; it has {", ".join(map(str, dataset.data_vars))}')
     if not axes:
         raise InputError("this run has no axes to draw along")
-    with matplotlib.rc_context(style.RC):
+    with _styled():
         if len(axes) == 1:
             return _lines(dataset, axes[0], name)
         return _maps(dataset, axes, name)
@@ -67,7 +68,7 @@ def parameters(
 
     x: axis values, shape (n,); words: name and unit of the axis; columns: energies in `unit`, (n,) each.
     """
-    with matplotlib.rc_context(style.RC):
+    with _styled():
         figure = _new_figure(1, 1, width=6.4)
         panel = figure.subplots()
         _frame(panel, x, None)
@@ -90,11 +91,9 @@ def parameters(
 def save(figure: Figure, path: Path) -> list[Path]:
     """Save as PNG and PDF beside each other, whole or not at all; returns both paths. No dates inside."""
     made = []
-    _settle(figure)
-    figure.set_layout_engine("none")
-    with matplotlib.rc_context(style.RC), warnings.catch_warnings():
-        # Titles may use scripts the font lacks; boxes in their place are better than no figure.
-        warnings.filterwarnings("ignore", message="Glyph .* missing", category=UserWarning)
+    with _styled():
+        _settle(figure)
+        figure.set_layout_engine("none")
         for ending, metadata in (
             (".png", {"Software": None}),
             (".pdf", {"CreationDate": None, "Creator": "gutz"}),
@@ -105,6 +104,14 @@ def save(figure: Figure, path: Path) -> list[Path]:
             temporary.replace(final)
             made.append(final)
     return made
+
+
+@contextmanager
+def _styled() -> Iterator[None]:
+    """The house style, for this drawing only. Titles may use scripts the font lacks: boxes are better than nothing."""
+    with matplotlib.rc_context(style.RC), warnings.catch_warnings():
+        warnings.filterwarnings("ignore", message="Glyph .* missing", category=UserWarning)
+        yield
 
 
 def _maps(dataset: xr.Dataset, axes: list[str], name: str) -> Figure:
@@ -182,27 +189,21 @@ def _name_ends(panel: Axes, ends: list[tuple[float, str, str]]) -> None:
     ends = sorted(end for end in ends if end[0] > 0)
     needed = 1.3 * style.TEXT_SIZE / (panel.get_window_extent().height / (panel.figure.dpi / 72))
     edge = panel.get_xlim()[1]
-    true = [
-        float(panel.transAxes.inverted().transform(panel.transData.transform((edge, e[0])))[1]) for e in ends
-    ]
+    true = [float(panel.transAxes.inverted().transform(panel.transData.transform((edge, e[0])))[1]) for e in ends]
     up, down = true.copy(), true.copy()
     for i in range(1, len(true)):
         up[i] = max(up[i], up[i - 1] + needed)
         down[-1 - i] = min(down[-1 - i], down[-i] - needed)
     # Both rows keep the distance needed, so their mean does too, and it stays around the true places.
     for (_, name, colour), a, b in zip(ends, up, down, strict=True):
-        panel.text(
-            1.015, (a + b) / 2, name, color=colour, va="center", transform=panel.transAxes, parse_math=False
-        )
+        panel.text(1.015, (a + b) / 2, name, color=colour, va="center", transform=panel.transAxes, parse_math=False)
 
 
 def _merged(columns: Mapping[str, NDArray[np.float64]]) -> dict[str, NDArray[np.float64]]:
     """Columns that are equal share one line and both names."""
     merged: dict[str, NDArray[np.float64]] = {}
     for name, values in columns.items():
-        same = next(
-            (other for other, v in merged.items() if np.allclose(v, values, rtol=1e-9, atol=0.0)), None
-        )
+        same = next((other for other, v in merged.items() if np.allclose(v, values, rtol=1e-9, atol=0.0)), None)
         if same is None:
             merged[name] = values
         else:
@@ -234,9 +235,7 @@ def _slices(dataset: xr.Dataset, axis: str) -> list[tuple[xr.Dataset, str]]:
     """A few values of an axis, evenly chosen, with words for each."""
     size = dataset.sizes[axis]
     chosen = np.unique(np.linspace(0, size - 1, min(size, MOST_PANELS)).round().astype(int))
-    return [
-        (dataset.isel({axis: int(i)}), _at(dataset, axis, float(dataset[axis].values[i]))) for i in chosen
-    ]
+    return [(dataset.isel({axis: int(i)}), _at(dataset, axis, float(dataset[axis].values[i]))) for i in chosen]
 
 
 def _at(dataset: xr.Dataset, axis: str, value: float) -> str:
@@ -287,11 +286,7 @@ def _frame(panel: Axes, x: NDArray[np.float64], y: NDArray[np.float64] | None) -
 
 def _is_log(values: NDArray[np.float64]) -> bool:
     """True for values in a geometric row over more than half a decade."""
-    if (
-        values.size < 3
-        or np.any(values <= 0)
-        or not min(values[0], values[-1]) / max(values[0], values[-1]) < 0.3
-    ):
+    if values.size < 3 or np.any(values <= 0) or not min(values[0], values[-1]) / max(values[0], values[-1]) < 0.3:
         return False
     return bool(np.allclose(np.diff(np.log(values)), np.log(values[1] / values[0]), rtol=1e-6))
 
@@ -312,9 +307,7 @@ def _cells(values: NDArray[np.float64], at: NDArray[np.float64]) -> NDArray[np.i
     return np.clip(np.searchsorted(edges, at) - 1, 0, values.size - 1)
 
 
-def _fill_phases(
-    panel: Axes, x: NDArray[np.float64], y: NDArray[np.float64], codes: NDArray[np.integer]
-) -> None:
+def _fill_phases(panel: Axes, x: NDArray[np.float64], y: NDArray[np.float64], codes: NDArray[np.integer]) -> None:
     colours = ListedColormap([style.PHASE_COLOURS[phase] for phase in _KINDS])
     norm = BoundaryNorm(np.arange(len(_KINDS) + 1) - 0.5 + int(_KINDS[0]), len(_KINDS))
     panel.pcolormesh(_edges(x), _edges(y), codes, cmap=colours, norm=norm, rasterized=True)
@@ -339,9 +332,7 @@ def _fill_numbers(
     return panel.pcolormesh(_edges(x), _edges(y), np.ma.masked_invalid(values), rasterized=True, **scale)
 
 
-def _hatch(
-    panel: Axes, x: NDArray[np.float64], y: NDArray[np.float64], part: xr.Dataset, axes: list[str]
-) -> None:
+def _hatch(panel: Axes, x: NDArray[np.float64], y: NDArray[np.float64], part: xr.Dataset, axes: list[str]) -> None:
     """Hatch points not to be trusted."""
     bad = _untrusted(part.transpose(axes[1], axes[0], ...))
     if bad.any():
@@ -391,9 +382,7 @@ def _name_regions(
     _name_with_legend(figure, [*grid[0]], caption, attempt)
 
 
-def _name_with_legend(
-    figure: Figure, panels: Sequence[Axes], caption: Text, attempt: Callable[[], list[int]]
-) -> None:
+def _name_with_legend(figure: Figure, panels: Sequence[Axes], caption: Text, attempt: Callable[[], list[int]]) -> None:
     """Place names; where some need a legend, make room for it above the caption and place again."""
     words, rows = caption.get_text(), 0
     while True:
@@ -407,9 +396,7 @@ def _name_with_legend(
         rows = needed
         caption.set_text("\n" * 2 * rows + words)
     if small:
-        patches = [
-            Patch(facecolor=_COLOURS[code], edgecolor=style.INK, lw=0.5, label=_WORDS[code]) for code in small
-        ]
+        patches = [Patch(facecolor=_COLOURS[code], edgecolor=style.INK, lw=0.5, label=_WORDS[code]) for code in small]
         top = figure.transFigure.inverted().transform((0, caption.get_window_extent().y1))[1]
         legend = figure.legend(
             handles=patches, loc="upper left", bbox_to_anchor=(0.02, float(top)), ncols=_LEGEND_COLUMNS,
@@ -434,6 +421,4 @@ def _caption(figure: Figure, dataset: xr.Dataset, held: str) -> Text:
     if title:
         figure.suptitle(title, x=0.02, ha="left", size=style.TITLE_SIZE, parse_math=False)
     small = style.clean(", ".join(facts), math.floor(wide * 1.5))
-    return figure.supxlabel(
-        small, x=0.02, ha="left", size=style.SMALL_SIZE, color=style.PALE_INK, parse_math=False
-    )
+    return figure.supxlabel(small, x=0.02, ha="left", size=style.SMALL_SIZE, color=style.PALE_INK, parse_math=False)

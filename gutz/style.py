@@ -27,7 +27,7 @@ PHASE_COLOURS: dict[Phase, str] = {
     Phase.DENSITY_WAVE: "#b3bd7a",
     Phase.NEEL: "#5c6b2f",
     Phase.SUPERSOLID: "#45a296",
-    Phase.SEPARATED: "#b7a3c6",
+    Phase.SEPARATED: "#d8a8c0",
     Phase.COLLAPSE: "#46413c",
 }
 

@@ -59,18 +59,11 @@ def _choose(full: Plan, at: dict[str, float]) -> tuple[Axis | None, list[Any]]:
     names = [a.name for a in full.axes]
     for name in at:
         if name not in names:
-            raise InputError(
-                f"--at {name}: is not an axis of this file; its axes are {', '.join(names) or 'none'}"
-            )
+            raise InputError(f"--at {name}: is not an axis of this file; its axes are {', '.join(names) or 'none'}")
     if len(along) > 1:
         held = " ".join(f"--at {a.name}={a.values[0]:g}" for a in along[1:])
-        raise InputError(
-            f"the file has {len(along)} lattice axes; keep one and fix the others, for example {held}"
-        )
-    picked = [
-        a.values if a in along else np.array([at[a.name]]) if a.name in at else a.values[:1]
-        for a in full.axes
-    ]
+        raise InputError(f"the file has {len(along)} lattice axes; keep one and fix the others, for example {held}")
+    picked = [a.values if a in along else np.array([at[a.name]]) if a.name in at else a.values[:1] for a in full.axes]
     return (along[0] if along else None), picked
 
 
@@ -93,9 +86,7 @@ def _columns(full: Plan, found: HubbardParameters, unit: str) -> dict[str, Any]:
     return {name: np.broadcast_to(np.ravel(values), (length,)) for name, values in columns.items()}
 
 
-def _record(
-    axis: Axis | None, columns: dict[str, Any], unit: str, found: HubbardParameters
-) -> dict[str, Any]:
+def _record(axis: Axis | None, columns: dict[str, Any], unit: str, found: HubbardParameters) -> dict[str, Any]:
     record: dict[str, Any] = {
         "unit": unit,
         "recoil_hz": found.recoil_hz,

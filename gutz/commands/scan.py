@@ -32,7 +32,10 @@ def run(
     """Run the scan; the exit code says whether every point can be trusted, or what stopped it."""
     start = time.monotonic()
     with console.progress(file.stem, quiet) as progress:
-        outcome = runner.run(file, out, overrides=overrides, resume=resume, force=force, progress=progress)
+        outcome = runner.run(
+            file, out, overrides=overrides, resume=resume, force=force, progress=progress,
+            notice=lambda words: console.note(words, quiet),
+        )  # fmt: skip
     files = [store.NAME]
     if not outcome.stopped:
         files += _draw(outcome.folder)

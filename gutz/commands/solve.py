@@ -20,16 +20,13 @@ from gutz.scan.runner import compute_chunk
 from gutz.status import UNTRUSTED, describe
 
 
-def run(
-    file: Path, overrides: Sequence[str], at: Sequence[str], as_json: bool, quiet: bool, debug: bool
-) -> int:
+def run(file: Path, overrides: Sequence[str], at: Sequence[str], as_json: bool, quiet: bool, debug: bool) -> int:
     """Solve the point and print it; exit code 1 if its numbers are not to be trusted."""
     _, full = load(file, overrides)
     point = choose(full, values(at))
     check_physics(point)
     found = {
-        name: np.asarray(v)[(0,) * len(point.axes)]
-        for name, v in compute_chunk(point, (0,) * len(point.axes)).items()
+        name: np.asarray(v)[(0,) * len(point.axes)] for name, v in compute_chunk(point, (0,) * len(point.axes)).items()
     }
     status = int(found["status"])
     if as_json:
@@ -57,8 +54,7 @@ def _record(point: Plan, found: dict[str, Any]) -> dict[str, Any]:
 def _print(point: Plan, found: dict[str, Any]) -> None:
     """Print the point as a table: one row per quantity, entries in reading order."""
     where = ", ".join(
-        f"{axis.name} = {console.number(float(axis.values[0]))} {_unit(axis.unit)}".strip()
-        for axis in point.axes
+        f"{axis.name} = {console.number(float(axis.values[0]))} {_unit(axis.unit)}".strip() for axis in point.axes
     )
     rows = []
     for name, field in schema.layout(point).items():

@@ -81,9 +81,7 @@ def parse(text: str, name: str, overrides: Sequence[str] = ()) -> Document:
     for mark in text:
         if mark not in "\t\n\r" and unicodedata.category(mark) in _INVISIBLE:
             number = text.count("\n", 0, text.index(mark)) + 1
-            raise InputError(
-                f"{name}: line {number} holds the invisible character U+{ord(mark):04X}; remove it"
-            )
+            raise InputError(f"{name}: line {number} holds the invisible character U+{ord(mark):04X}; remove it")
     data = _toml(text, name)
     for override in overrides:
         _apply(data, override)

@@ -30,9 +30,7 @@ def write_netcdf(dataset: xr.Dataset, path: Path) -> None:
         clean.to_netcdf(temporary, engine=ENGINE, format="NETCDF4", encoding=encoding)
         replace_durably(temporary, path)
     except OSError as error:
-        raise OutputError(
-            f"{path.name} cannot be written ({(error.strerror or 'disk error').lower()})"
-        ) from None
+        raise OutputError(f"{path.name} cannot be written ({(error.strerror or 'disk error').lower()})") from None
     finally:
         temporary.unlink(missing_ok=True)
 

@@ -155,9 +155,7 @@ def length(value: Any) -> float:
     try:
         return parse_quantity(value, "length", "")
     except InputError:
-        raise ValueError(
-            f"must be a number and one of the units {', '.join(KINDS['length'].units)}"
-        ) from None
+        raise ValueError(f"must be a number and one of the units {', '.join(KINDS['length'].units)}") from None
 
 
 def text(value: Any) -> str:

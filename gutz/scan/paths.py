@@ -23,11 +23,7 @@ def output_folder(text: str) -> Path:
     for mark in text:
         if unicodedata.category(mark) in ("Cc", "Cf", "Cs", "Co", "Cn", "Zl", "Zp"):
             raise InputError(f"--out holds the invisible character U+{ord(mark):04X}; choose another name")
-    if (
-        not text.strip()
-        or len(text) > MAX_PATH
-        or any(len(os.fsencode(p)) > MAX_PART for p in Path(text).parts)
-    ):
+    if not text.strip() or len(text) > MAX_PATH or any(len(os.fsencode(p)) > MAX_PART for p in Path(text).parts):
         raise InputError(f"--out must be the name of a folder, with parts of at most {MAX_PART} bytes")
     try:
         folder = Path(text).resolve()

@@ -81,9 +81,7 @@ class Plan:
 
     def region(self, index: Sequence[int]) -> tuple[slice, ...]:
         """Where a chunk lies in the grid; chunks at the end of an axis may be cut short."""
-        return tuple(
-            slice(i * c, min((i + 1) * c, n)) for i, c, n in zip(index, self.chunk, self.shape, strict=True)
-        )
+        return tuple(slice(i * c, min((i + 1) * c, n)) for i, c, n in zip(index, self.chunk, self.shape, strict=True))
 
     def picked(self, index: Sequence[int]) -> tuple[Array, ...]:
         """Axis values of a chunk, always `chunk` many per axis: short ones repeat their last value."""
@@ -131,17 +129,11 @@ def at(full: Plan, values: Mapping[str, float]) -> Plan:
     names = [axis.name for axis in full.axes]
     for name in values:
         if name not in names:
-            raise InputError(
-                f"--at {name}: is not an axis of this file; its axes are {', '.join(names) or 'none'}"
-            )
+            raise InputError(f"--at {name}: is not an axis of this file; its axes are {', '.join(names) or 'none'}")
     missing = [name for name in names if name not in values]
     if missing:
-        example = " ".join(
-            f"--at {axis.name}={axis.values[0]:g}" for axis in full.axes if axis.name in missing
-        )
-        raise InputError(
-            f"the axes {', '.join(missing)} need a value each to choose one point: add {example}"
-        )
+        example = " ".join(f"--at {axis.name}={axis.values[0]:g}" for axis in full.axes if axis.name in missing)
+        raise InputError(f"the axes {', '.join(missing)} need a value each to choose one point: add {example}")
     axes = []
     for axis in full.axes:
         value, lowest = values[axis.name], axis.target.parameter.lowest
@@ -181,9 +173,7 @@ def check_physics(plan: Plan) -> None:
     if found["n_max"] is not None and found["filling"] is not None:
         highest = max(float(np.max(values)) for values in found["filling"])
         if highest >= found["n_max"]:
-            raise InputError(
-                f"mixture.filling reaches {highest:g}; it must stay below n_max = {found['n_max']}"
-            )
+            raise InputError(f"mixture.filling reaches {highest:g}; it must stay below n_max = {found['n_max']}")
     if spec.species == 2:
         U = np.stack(np.broadcast_arrays(*found["U"]), axis=-1)
         limits.check_not_all_collapsed(U, np.asarray(found["U12"]), found["n_max"])
@@ -274,8 +264,7 @@ def _settings(spec: Spec, grids: list[tuple[Axis, Array]], found: HubbardParamet
         settings["U12"] = energies.get("U12", 0.0)
     else:
         settings["t"] = tuple(
-            tuple(_hopping(mixture.t, swept("mixture.t", i, d), i, d) for d in range(dim))
-            for i in range(species)
+            tuple(_hopping(mixture.t, swept("mixture.t", i, d), i, d) for d in range(dim)) for i in range(species)
         )
         settings["U"] = each("U")
         settings["U12"] = single("U12")
@@ -351,9 +340,7 @@ def _lattice(section: LatticeSection, species: int, grids: list[tuple[Axis, Arra
         parts = [beam(i, direction) for i in range(1 if section.same_light else species)]
         kinds = {unit for _, unit in parts}
         if len(kinds) > 1:
-            raise InputError(
-                "lattice.depth must be a depth or a frequency for both species alike along each axis"
-            )
+            raise InputError("lattice.depth must be a depth or a frequency for both species alike along each axis")
         values = parts[0][0] if len(parts) == 1 else tuple(value for value, _ in parts)
         axes.append(StandingWave(values) if kinds == {"E_R"} else Harmonic(values))
     return OpticalLattice(

@@ -39,6 +39,9 @@ DISK_MARGIN = 50_000_000
 Progress = Callable[[int, int], None]
 """Called with the chunks done and the chunks there are."""
 
+Notice = Callable[[str], None]
+"""Called with a sentence for the person who waits."""
+
 
 class Executor(Protocol):
     """Anything that can be handed work; `concurrent.futures` pools and their like."""
@@ -92,6 +95,7 @@ def run(
     resume: bool = False,
     force: bool = False,
     progress: Progress | None = None,
+    notice: Notice | None = None,
     executor: Executor | None = None,
     in_flight: int = 1,
 ) -> Outcome:
@@ -99,7 +103,7 @@ def run(
 
     out: output folder, default the file's name without ".toml", in the current folder. overrides: texts such
     as "mixture.T=0.1". resume: continue a stopped run. force: replace an existing one. progress: called after
-    every chunk. in_flight: chunks handed to the executor at once.
+    every chunk. notice: called with what to tell a person meanwhile. in_flight: chunks handed to the executor at once.
     Raises InputError (mistakes in the file), OutputError (output exists or is in use), DataError (existing run
     damaged), ResourceError (disk). At Ctrl-C or SIGTERM the chunk at work is finished and saved, and then
     `stopped` is set.
@@ -119,7 +123,7 @@ def run(
             target = store.Store.reopen(folder, full)
         else:
             target = store.Store.create(folder, full, source, {})
-        return _work(folder, full, target, progress, executor or Here(), in_flight)
+        return _work(folder, full, target, progress, notice, executor or Here(), in_flight)
 
 
 def compute_chunk(full: Plan, index: Sequence[int]) -> dict[str, Any]:
@@ -159,6 +163,7 @@ def _work(
     full: Plan,
     target: store.Store,
     progress: Progress | None,
+    notice: Notice | None,
     executor: Executor,
     in_flight: int,
 ) -> Outcome:
@@ -167,7 +172,7 @@ def _work(
     total = int(np.prod(full.chunks))
     finished = total - len(todo)
     queue, pending = iter(todo), dict[Future[Any], tuple[int, ...]]()
-    with _stoppable() as stop:
+    with _stoppable(notice) as stop:
         while True:
             while not stop and len(pending) < in_flight and (index := next(queue, None)) is not None:
                 pending[executor.submit(compute_chunk, full, index)] = index
@@ -226,13 +231,9 @@ def _locked(folder: Path) -> Iterator[None]:
     try:
         lock.acquire()
     except Timeout:
-        raise OutputError(
-            f"{folder.name} is in use by another run; wait for it or choose another --out"
-        ) from None
+        raise OutputError(f"{folder.name} is in use by another run; wait for it or choose another --out") from None
     except OSError as error:
-        raise OutputError(
-            f"{folder.name} cannot be locked ({(error.strerror or 'disk error').lower()})"
-        ) from None
+        raise OutputError(f"{folder.name} cannot be locked ({(error.strerror or 'disk error').lower()})") from None
     try:
         yield
     finally:
@@ -241,17 +242,19 @@ def _locked(folder: Path) -> Iterator[None]:
 
 
 @contextmanager
-def _stoppable() -> Iterator[list[int]]:
-    """A list that receives the signal at the first Ctrl-C or SIGTERM; a second Ctrl-C interrupts at once."""
+def _stoppable(notice: Notice | None) -> Iterator[list[int]]:
+    """A list that receives the signal at the first Ctrl-C or SIGTERM; a second one interrupts at once."""
     received: list[int] = []
     if threading.current_thread() is not threading.main_thread():
         yield received
         return
 
     def note(number: int, frame: FrameType | None) -> None:
-        if received and number == signal.SIGINT:
+        if received:
             raise KeyboardInterrupt
         received.append(number)
+        if notice:
+            notice("stopping as soon as the chunk at work is saved; once more stops at once")
 
     before = {number: signal.signal(number, note) for number in (signal.SIGINT, signal.SIGTERM)}
     try:

@@ -108,8 +108,7 @@ def bytes_per_point(plan: Plan) -> int:
     """Bytes of one point before compression."""
     length = sizes(plan)
     return sum(
-        np.dtype(field.dtype).itemsize
-        * int(np.prod([length[d] for d in field.dims[len(plan.axes) :]], dtype=int))
+        np.dtype(field.dtype).itemsize * int(np.prod([length[d] for d in field.dims[len(plan.axes) :]], dtype=int))
         for field in layout(plan).values()
     )
 

@@ -341,12 +341,8 @@ def _of_combination(spec: Spec) -> Iterator[Mistake]:
 def _of_axis(spec: Spec, name: str, axis: AxisSection, found: parameters.Target) -> Iterator[Mistake]:
     key = f"axes.{name}"
     if not name.isidentifier() or not name.isascii() or len(name) > 40 or name.startswith("_"):
-        yield Mistake(
-            key, "the name of an axis must be a word of letters, digits and underscores, at most 40"
-        )
-    elif name in _RESERVED and not (
-        name in GIVEN_BY_AXIS and found.path == f"mixture.{name}" and found.whole
-    ):
+        yield Mistake(key, "the name of an axis must be a word of letters, digits and underscores, at most 40")
+    elif name in _RESERVED and not (name in GIVEN_BY_AXIS and found.path == f"mixture.{name}" and found.whole):
         yield Mistake(key, f'"{name}" is the name of an output; call the axis something else')
     if found.path.startswith("lattice.") and spec.lattice is None:
         yield Mistake(f"{key}.parameter", f"{axis.parameter} needs a [lattice] section")
@@ -356,9 +352,7 @@ def _of_axis(spec: Spec, name: str, axis: AxisSection, found: parameters.Target)
             f"{axis.parameter} follows from [lattice]; run over lattice.depth, lattice.a12, ...",
         )
     if found.path == "lattice.depth" and found.species and spec.lattice and spec.lattice.same_light:
-        yield Mistake(
-            f"{key}.parameter", f"{axis.parameter} cannot be set for one species where same_light = true"
-        )
+        yield Mistake(f"{key}.parameter", f"{axis.parameter} cannot be set for one species where same_light = true")
     if found.species is not None and max(found.species) >= spec.species:
         yield Mistake(f"{key}.parameter", f"{axis.parameter} names species 2, but there is one species")
     top = 3 if found.path == "lattice.depth" else spec.dim
@@ -369,9 +363,7 @@ def _of_axis(spec: Spec, name: str, axis: AxisSection, found: parameters.Target)
         rule = f"must be one of {', '.join(allowed)}" if allowed else "must be left out for this parameter"
         yield Mistake(f"{key}.unit", f'"{axis.unit}" is not allowed; it {rule}')
     if axis.unit is None and found.parameter.kind == "energy" and spec.lattice is not None:
-        yield Mistake(
-            f"{key}.unit", f'is missing; say in which unit {axis.parameter} is counted, for example "nK"'
-        )
+        yield Mistake(f"{key}.unit", f'is missing; say in which unit {axis.parameter} is counted, for example "nK"')
     ends = axis.values or (axis.start, axis.stop)
     low = min(end for end in ends if end is not None)
     if axis.values is None and axis.start == axis.stop:
@@ -392,9 +384,7 @@ def _of_lengths(spec: Spec) -> Iterator[Mistake]:
         value = getattr(spec.mixture, name)
         if isinstance(value, tuple) and not isinstance(value, Energy):
             if len(value) != species:
-                yield Mistake(
-                    f"mixture.{name}", f"has {len(value)} entries; it must have {species}, one per species"
-                )
+                yield Mistake(f"mixture.{name}", f"has {len(value)} entries; it must have {species}, one per species")
             elif name == "t" and any(isinstance(part, tuple) and len(part) != dim for part in value):
                 yield Mistake("mixture.t", f"must have {dim} directions for each species, as dim = {dim}")
     if spec.lattice is not None and spec.lattice.depth is not None:
@@ -405,9 +395,7 @@ def _of_lengths(spec: Spec) -> Iterator[Mistake]:
             yield Mistake("lattice.depth", "must be the first species' alone where same_light = true")
     if spec.lattice is not None and spec.lattice.same_light and species != 2:
         yield Mistake("lattice.same_light", "must be false or left out, because there is one species")
-    if species == 1 and (
-        spec.mixture.U12 != 0 or any(a.parameter == "mixture.U12" for a in spec.axes.values())
-    ):
+    if species == 1 and (spec.mixture.U12 != 0 or any(a.parameter == "mixture.U12" for a in spec.axes.values())):
         yield Mistake("mixture.U12", "must be left out, because there is one species")
 
 
@@ -423,9 +411,7 @@ def _of_units(spec: Spec) -> Iterator[Mistake]:
                     f'"{part.value:g} {part.unit}" is not allowed; without [lattice] it must be a number',
                 )
             elif spec.lattice is not None and not part.unit and part.value != 0:
-                yield Mistake(
-                    f"mixture.{name}", f'{part.value:g} needs a unit, for example "5 nK" or "0.1 U1"'
-                )
+                yield Mistake(f"mixture.{name}", f'{part.value:g} needs a unit, for example "5 nK" or "0.1 U1"')
 
 
 def differences(old: str, new: str) -> Iterator[str]:

@@ -43,9 +43,7 @@ class Store:
         self._plan = plan
         self._fields = schema.layout(plan)
         group = zarr.open_group(path, mode="r+", use_consolidated=False)
-        self._arrays = {
-            name: _array(group, name).with_config({"write_empty_chunks": True}) for name in self._fields
-        }
+        self._arrays = {name: _array(group, name).with_config({"write_empty_chunks": True}) for name in self._fields}
 
     @classmethod
     def create(cls, folder: Path, plan: Plan, document: Document, tolerances: Mapping[str, float]) -> "Store":
@@ -120,15 +118,11 @@ def remove(folder: Path) -> None:
     path = inside(folder, NAME)
     if path.exists():
         try:
-            ours = str(json.loads((path / "zarr.json").read_bytes())["attributes"]["source"]).startswith(
-                "gutz "
-            )
+            ours = str(json.loads((path / "zarr.json").read_bytes())["attributes"]["source"]).startswith("gutz ")
         except (OSError, ValueError, KeyError, TypeError):
             ours = False
         if not ours:
-            raise DataError(
-                f"{folder.name}/{NAME} was not written by gutz; it is not replaced, move it away yourself"
-            )
+            raise DataError(f"{folder.name}/{NAME} was not written by gutz; it is not replaced, move it away yourself")
         shutil.rmtree(path)
 
 
@@ -248,15 +242,12 @@ def _open_group(path: Path) -> zarr.Group:
         number = attributes.get("schema_version")
         whole = seal == _seal(path, attributes)
     except Exception as error:  # a damaged description can fail in any way
-        raise DataError(
-            f"{_shown(path)} is damaged: its description cannot be read ({_cause(error)})"
-        ) from None
+        raise DataError(f"{_shown(path)} is damaged: its description cannot be read ({_cause(error)})") from None
     if not ours:
         raise DataError(f"{_shown(path)} was not written by gutz")
     if isinstance(number, int) and number > schema.VERSION:
         raise DataError(
-            f"{_shown(path)} was written by a newer gutz (layout {number}); "
-            f"this one reads up to {schema.VERSION}"
+            f"{_shown(path)} was written by a newer gutz (layout {number}); this one reads up to {schema.VERSION}"
         )
     if not whole:
         raise DataError(f"{_shown(path)} is damaged: its description does not match its seal")

@@ -86,9 +86,7 @@ def nothing_left_behind(tmp_path):
 
     handlers = [signal.getsignal(number) for number in (signal.SIGINT, signal.SIGTERM)]
     yield
-    strays = [
-        path for path in Path(tmp_path).rglob("*") if path.name.endswith(".partial") or path.name == ".lock"
-    ]
+    strays = [path for path in Path(tmp_path).rglob("*") if path.name.endswith(".partial") or path.name == ".lock"]
     assert not strays
     assert not multiprocessing.active_children()
     assert [signal.getsignal(number) for number in (signal.SIGINT, signal.SIGTERM)] == handlers

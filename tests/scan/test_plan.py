@@ -9,9 +9,9 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy import constants
 
+from gutz.atoms import atom
 from gutz.errors import InputError
 from gutz.optics import OpticalLattice, StandingWave, hubbard_parameters
-from gutz.atoms import atom
 from gutz.scan import document, plan, schema, spec
 
 
@@ -69,15 +69,11 @@ def test_lattice_energies_are_in_recoils_of_the_first_species():
     found = full.settings(picked, full.lattice(picked))
     mass = 86.909180531 * constants.atomic_mass  # 87Rb, Atomic Mass Evaluation (literature list, from memory)
     recoil = constants.h**2 / (2 * mass * (1064e-9) ** 2)
-    assert found["T"].ravel() == pytest.approx(
-        [5e-9 * constants.k / recoil, 10e-9 * constants.k / recoil], rel=1e-7
-    )
+    assert found["T"].ravel() == pytest.approx([5e-9 * constants.k / recoil, 10e-9 * constants.k / recoil], rel=1e-7)
     a0 = constants.physical_constants["Bohr radius"][0]
     rubidium = atom("87Rb")
     direct = hubbard_parameters(
-        OpticalLattice(
-            1064e-9, (rubidium, rubidium), StandingWave(12.0), a11=100.4 * a0, a22=95.44 * a0, a12=90 * a0
-        )
+        OpticalLattice(1064e-9, (rubidium, rubidium), StandingWave(12.0), a11=100.4 * a0, a22=95.44 * a0, a12=90 * a0)
     )
     assert found["t"][0][0].ravel() == pytest.approx(direct.t[0, 0] / recoil, rel=1e-7)
     assert np.ravel(found["U12"]) == pytest.approx(direct.U12 / recoil, rel=1e-7)
@@ -150,9 +146,7 @@ def test_one_point_is_chosen_by_name():
     ],
 )
 def test_grids_without_sense_are_refused(overrides, words):
-    full = make(
-        MIXTURE.replace("[axes.mu]", "[axes.n]"), *[o.replace("axes.mu", "axes.n") for o in overrides]
-    )
+    full = make(MIXTURE.replace("[axes.mu]", "[axes.n]"), *[o.replace("axes.mu", "axes.n") for o in overrides])
     with pytest.raises(InputError, match=words.replace("(", r"\(")):
         plan.check_physics(full)
 

@@ -43,9 +43,7 @@ def test_order_and_executor_do_not_change_a_byte(quick, mixture_file, tmp_path):
 
 def test_outcome_counts_what_was_stored(quick, mixture_file, tmp_path):
     told = []
-    outcome = quick.run(
-        mixture_file, tmp_path / "out", progress=lambda done, total: told.append((done, total))
-    )
+    outcome = quick.run(mixture_file, tmp_path / "out", progress=lambda done, total: told.append((done, total)))
     status = open_run(tmp_path / "out").status.values
     assert outcome.points == status.size == 1200
     assert outcome.untrusted == np.count_nonzero(status & int(UNTRUSTED)) > 0
@@ -55,12 +53,8 @@ def test_outcome_counts_what_was_stored(quick, mixture_file, tmp_path):
 
 
 def test_parts_beyond_collapse_are_solved_as_such(quick, mixture_file, tmp_path):
-    text = (
-        mixture_file.read_text().replace('"mixture.mu"', '"mixture.U12"').replace("[axes.mu]", "[axes.U12]")
-    )
-    mixture_file.write_text(
-        text.replace("start = 0.1", "start = -3.0").replace("T = 0.1", "T = 0.1\nmu = 0.4")
-    )
+    text = mixture_file.read_text().replace('"mixture.mu"', '"mixture.U12"').replace("[axes.mu]", "[axes.U12]")
+    mixture_file.write_text(text.replace("start = 0.1", "start = -3.0").replace("T = 0.1", "T = 0.1\nmu = 0.4"))
     outcome = quick.run(mixture_file, tmp_path / "out", overrides=["mixture.U12=0"])
     run = open_run(tmp_path / "out")
     assert np.array_equal(run.phase == 12, np.broadcast_to((run.U12 < -1).values[:, None], (40, 30)))
@@ -90,9 +84,7 @@ def test_an_existing_run_is_not_overwritten(quick, mixture_file, tmp_path):
 
 def test_other_settings_are_refused_with_the_difference(quick, mixture_file, tmp_path):
     quick.run(mixture_file, tmp_path / "out")
-    with pytest.raises(
-        OutputError, match=r"other settings \(mixture.U12: 0.5 -> 0.6\); choose another --out"
-    ):
+    with pytest.raises(OutputError, match=r"other settings \(mixture.U12: 0.5 -> 0.6\); choose another --out"):
         quick.run(mixture_file, tmp_path / "out", resume=True, overrides=["mixture.U12=0.6"])
 
 
