@@ -16,9 +16,16 @@ from gutz.commands.points import load
 from gutz.scan import schema
 from gutz.scan.plan import Plan, check_physics
 
-SECONDS_PER_POINT = {"product": 5e-4}
-"""Measured on one core of a small cloud machine; other machines differ by a factor of a few."""
-START_SECONDS = 15.0
+SECONDS_PER_POINT = 1.6e-3
+"""A point with 25 states per site (two species, n_max = 4), measured on one core of a small cloud machine."""
+STATES, GROWTH = 25, 3.5
+"""How that grows with the states per site: a fit to 25, 36 and 49 states (1.6, 6 and 17 ms)."""
+LEAST_SECONDS = 1e-3
+AUTOMATIC = {1: 9, 2: 5}
+"""Cutoff assumed where n_max is left automatic, by number of species."""
+TARGET_FACTOR = 10.0
+"""Points whose filling or entropy is given are solved about this many times."""
+START_SECONDS = 30.0
 """Loading and compiling, the first time."""
 BASE_BYTES = 600_000_000
 """Memory of the loaded program before the first point."""
@@ -57,8 +64,17 @@ def estimate(full: Plan) -> dict[str, Any]:
         "chunks": math.prod(full.chunks),
         "memory_bytes": BASE_BYTES + WORKING_COPIES * size * math.prod(full.chunk),
         "disk_bytes": size * full.points,
-        "seconds": START_SECONDS + SECONDS_PER_POINT[full.spec.ansatz.kind] * full.points,
+        "seconds": START_SECONDS + _seconds_per_point(full) * full.points,
     }
+
+
+def _seconds_per_point(full: Plan) -> float:
+    spec = full.spec
+    states = ((spec.mixture.n_max or AUTOMATIC[spec.species]) + 1) ** spec.species
+    seconds = max(LEAST_SECONDS, SECONDS_PER_POINT * (states / STATES) ** GROWTH)
+    targets = {axis.target.path for axis in full.axes} & {"mixture.filling", "mixture.entropy"}
+    solved_for = spec.mixture.filling is not None or spec.mixture.entropy is not None or targets
+    return seconds * (TARGET_FACTOR if solved_for else 1.0)
 
 
 def _cautions(full: Plan) -> list[str]:

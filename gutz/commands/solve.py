@@ -60,7 +60,12 @@ def _print(point: Plan, found: dict[str, Any]) -> None:
     for name, field in schema.layout(point).items():
         if name in ("phase", "status", "cautions"):
             continue
-        entries = "  ".join(console.number(float(entry)) for entry in np.ravel(found[name]))
+        value = found[name]
+        if field.dims[-1:] == ("direction",) and np.array_equal(
+            value, np.broadcast_to(value[..., :1], value.shape), True
+        ):
+            value = value[..., 0]  # alike along x, y and z: said once
+        entries = "  ".join(console.number(float(entry)) for entry in np.ravel(value))
         rows.append((field.attributes["long_name"], name, entries, _unit(field.attributes["units"])))
     rows.insert(0, ("Phase", "phase", WORDS[Phase(int(found["phase"]))], ""))
     console.table((where or "the point", "name", "value", "unit"), rows)
