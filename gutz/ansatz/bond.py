@@ -5,9 +5,9 @@ Out: F_bond = -1/2 ∫_0^β <V(τ) V(0)> dτ split by kind of process, its value
 
     V = -sum_a t_a (δb†_a ⊗ δb_a + δb_a ⊗ δb†_a),   δb_a = b_a - <b_a>
 
-With O running over (b_1, b_1†, b_2, b_2†) and C_AD(τ) = <O_A(τ) O_D†> the integrand is a sum of products of two C, so no
-array larger than (state, state, time) appears. Time runs over Gauss-Legendre nodes on a scale that is logarithmic
-from the inverse bandwidth to β/2; at T = 0 the integral over (0, ∞) is done in closed form, 1/(E_m + E_p - 2 E_0).
+With O running over (b_1, b_1†, b_2, b_2†) and C_AD(τ) = <O_A(τ) O_D†> the integrand is a sum of products of two
+C, so no array larger than (state, state, time) appears. Time runs over Gauss-Legendre nodes on a scale that is
+logarithmic from the inverse bandwidth to β/2; at T = 0 the integral over (0, ∞) is done in closed form, 1/(E_m + E_p - 2 E_0).
 Derivatives are divided differences of exp(-τh), without poles at degenerate levels (Daleckii and Krein).
 """
 
@@ -95,7 +95,7 @@ def frame(n_max: int, species: int, kind: str) -> Frame:
             alike = {"full": True, "normal": A == D}.get(kind, charge[A] == charge[D])
             if alike:
                 combos.append((A, D))
-    dagger = [tuple(sorted((A ^ 1, D ^ 1))) for A, D in combos]
+    dagger = [(min(A ^ 1, D ^ 1), max(A ^ 1, D ^ 1)) for A, D in combos]
     partner = np.array([combos.index(c) for c in dagger])
     slot = np.array([(int((A ^ D) % 2 == 0), A // 2, D // 2) for A, D in combos])
     return Frame(kind, space, order, blocks, lower, number, fields, np.array(combos), partner, slot)
@@ -193,15 +193,15 @@ class _Kernel(NamedTuple):
 def bond(lv: Levels, deviation: Array, weight: Array, f: Frame, *, cold: bool, nodes: int) -> Bond:
     """Evaluate the bond term and its derivative.
 
-    lv: levels of each site, batch (..., sublattice). deviation: δb_a in levels, (..., sublattice, species, state, state).
-    weight: factors t_a t_b summed over directions for anomalous and normal processes, (..., 2, species, species).
-    Not to be differentiated by jax; see `bond_energy`.
+    lv: levels of each site, batch (..., sublattice). deviation: δb_a in levels, (..., sublattice, species, state,
+    state). weight: factors t_a t_b summed over directions for anomalous and normal processes, (..., 2, species,
+    species). Not to be differentiated by jax; see `bond_energy`.
     """
     d = deviation.shape[-1]
-    O = jnp.stack([deviation, jnp.swapaxes(deviation, -1, -2)], axis=-3)
-    O = O.reshape(*deviation.shape[:-3], -1, d, d)
+    ops = jnp.stack([deviation, jnp.swapaxes(deviation, -1, -2)], axis=-3)
+    ops = ops.reshape(*deviation.shape[:-3], -1, d, d)
     first, second = f.combos[:, 0], f.combos[:, 1]
-    X = O[..., first, :, :] * O[..., second, :, :]
+    X = ops[..., first, :, :] * ops[..., second, :, :]
     multiplicity = np.where(first == second, 1.0, 2.0)
     factor = multiplicity * weight[..., f.slot[:, 0], f.slot[:, 1], f.slot[:, 2]]
     kernel = _cold if cold else _warm
@@ -213,13 +213,11 @@ def bond(lv: Levels, deviation: Array, weight: Array, f: Frame, *, cold: bool, n
         spread[row, kind, a, b] += 0.5 * multiplicity[row]
         spread[row, kind, b, a] += 0.5 * multiplicity[row]
     parts = jnp.einsum("...c,ckab->...kab", k.per_combo, jnp.asarray(spread))
-    slope = _slope(lv, O, k, first, second, cold=cold)
+    slope = _slope(lv, ops, k, f, cold=cold)
     return Bond(value, k.variance, parts, slope)
 
 
-def _warm(
-    lv: Levels, X: Array, factor: Array, multiplicity: np.ndarray, partner: np.ndarray, nodes: int
-) -> _Kernel:
+def _warm(lv: Levels, X: Array, factor: Array, multiplicity: np.ndarray, partner: np.ndarray, nodes: int) -> _Kernel:
     d = X.shape[-1]
     beta = lv.inverse_temperature[..., None, None]
     energy = lv.energy - lv.energy.min(-1, keepdims=True)
@@ -242,14 +240,10 @@ def _warm(
     omega = jnp.einsum("...ct,...pt->...cp", stacked, W)
     omega = omega.reshape(*X.shape[:-3], 3, X.shape[-3], d, d)
     norm = (lv.inverse_temperature * (D * C).sum((-1, -2)))[..., None] * lv.weight
-    return _Kernel(
-        per_combo, variance, omega[..., 0, :, :, :], omega[..., 1, :, :, :], omega[..., 2, :, :, :], norm
-    )
+    return _Kernel(per_combo, variance, omega[..., 0, :, :, :], omega[..., 1, :, :, :], omega[..., 2, :, :, :], norm)
 
 
-def _cold(
-    lv: Levels, X: Array, factor: Array, multiplicity: np.ndarray, partner: np.ndarray, nodes: int
-) -> _Kernel:
+def _cold(lv: Levels, X: Array, factor: Array, multiplicity: np.ndarray, partner: np.ndarray, nodes: int) -> _Kernel:
     ground = lv.weight
     excited = 1.0 - ground
     x = jnp.einsum("...cmn,...m->...cn", X, ground) * excited[..., None, :]
@@ -271,31 +265,27 @@ def _cold(
     return _Kernel(per_combo, variance, product, late, -late, jnp.zeros_like(ground))
 
 
-def _slope(
-    lv: Levels, O: Array, k: _Kernel, first: np.ndarray, second: np.ndarray, *, cold: bool
-) -> Array:
+def _slope(lv: Levels, ops: Array, k: _Kernel, f: Frame, *, cold: bool) -> Array:
     """Symmetric matrix G with dF_bond = sum G dh, in levels; (..., sublattice, state, state)."""
-    d = O.shape[-1]
+    d = ops.shape[-1]
+    combo = np.zeros((ops.shape[-3], ops.shape[-3]), int)
+    share = np.zeros(combo.shape)
+    for c, (i, j) in enumerate(f.combos):
+        combo[i, j] = combo[j, i] = c
+        share[i, j] = share[j, i] = 1.0 if i != j else 2.0
 
     def pull(sensitivity: Array) -> Array:
-        """Derivative in each O, stacked along rows: (..., op * state, state)."""
-        rows = []
-        for A in range(O.shape[-3]):
-            part = jnp.zeros(O.shape[:-3] + (d, d))
-            for c, (i, j) in enumerate(zip(first, second, strict=True)):
-                for hit, mate in ((i, j), (j, i)):
-                    if hit == A:
-                        part = part + sensitivity[..., c, :, :] * O[..., mate, :, :]
-            rows.append(part)
-        return jnp.stack(rows, axis=-3)
+        """Derivative in each O, (..., op, state, state)."""
+        present = share[:, :, None, None] * sensitivity[..., combo, :, :]
+        return (present * ops[..., None, :, :, :]).sum(-3)
 
     def left(G: Array) -> Array:  # sum_A O_A^T G_A
-        flat = O.reshape(*O.shape[:-3], -1, d)
+        flat = ops.reshape(*ops.shape[:-3], -1, d)
         return jnp.swapaxes(flat, -1, -2) @ G.reshape(*G.shape[:-3], -1, d)
 
     def right(G: Array) -> Array:  # sum_A G_A O_A^T
         wide = jnp.swapaxes(G, -3, -2).reshape(*G.shape[:-3], d, -1)
-        return wide @ jnp.swapaxes(jnp.swapaxes(O, -3, -2).reshape(*O.shape[:-3], d, -1), -1, -2)
+        return wide @ jnp.swapaxes(jnp.swapaxes(ops, -3, -2).reshape(*ops.shape[:-3], d, -1), -1, -2)
 
     g = pull(k.to_product)
     turn = left(g) - right(g)
@@ -350,7 +340,7 @@ def _bond_energy_jvp(f: Frame, cold: bool, nodes: int, primals: Any, tangents: A
 def _refuse(f: Frame, cold: bool, nodes: int, primals: Any, tangents: Any) -> Any:
     raise InputError(
         "a second derivative of the dressed free energy was asked for; jax gives first derivatives only, second ones "
-        "come from gutz.ansatz.dressed.observables"
+        "come from gutz.ansatz.derived.observables"
     )
 
 

@@ -7,8 +7,8 @@ Out: the free energy per site, its gradient in the fields, and the averages behi
     F   = mean over s of [F_tr(h_s) + sum_i x_si <Q_i>_s] - sum_a z t_a phi_Aa phi_Ba + λ sum_directions F_bond
 
 A truncated expansion, so not an upper bound, and bounded below only near physical states: `families` says how to
-minimise it. Second order in the hopping at fixed order parameters: effective-potential theory of dos Santos and Pelster,
-Phys. Rev. A 79, 013614 (2009), here at any T ≥ 0 and with pair and anti-pair fields.
+minimise it. Second order in the hopping at fixed order parameters: effective-potential theory of dos Santos and
+Pelster, Phys. Rev. A 79, 013614 (2009), here at any T ≥ 0 and with pair and anti-pair fields.
 """
 
 from typing import Any, NamedTuple
@@ -77,9 +77,7 @@ def hamiltonian(p: Sites, x: Array, f: Frame, names: tuple[str, ...]) -> Array:
     return energy[..., :, None] * jnp.eye(d) - coupled
 
 
-def look(
-    p: Sites, x: Array, lam: Array, *, f: Frame, names: tuple[str, ...], cold: bool, nodes: int
-) -> Look:
+def look(p: Sites, x: Array, lam: Array, *, f: Frame, names: tuple[str, ...], cold: bool, nodes: int) -> Look:
     """Evaluate functional and gradient; values only (see `free_energy` for jax derivatives).
 
     x: (..., sublattice, field) for the fields in `names`, which the frame must allow. lam: (...), strength of the bond
@@ -119,9 +117,7 @@ def look(
     )
 
 
-def _fields_in_levels(
-    lv: gibbs.Levels, deviation: Array, phi: Array, f: Frame, names: tuple[str, ...]
-) -> Array:
+def _fields_in_levels(lv: gibbs.Levels, deviation: Array, phi: Array, f: Frame, names: tuple[str, ...]) -> Array:
     """The Q_i in the basis of levels; those of J follow from b_a, which is there already."""
     out: list[Array] = []
     others = [name for name in names if not name.startswith("J")]
@@ -138,7 +134,14 @@ def _fields_in_levels(
 
 
 def free_energy(
-    p: Sites, x: Array, lam: Array, *, f: Frame, names: tuple[str, ...], cold: bool, nodes: int,
+    p: Sites,
+    x: Array,
+    lam: Array,
+    *,
+    f: Frame,
+    names: tuple[str, ...],
+    cold: bool,
+    nodes: int,
     weight: Array | None = None,
 ) -> Array:
     """The same functional for jax to differentiate once, in the fields and in every parameter; shape (...).
