@@ -17,18 +17,21 @@ else:
 __version__ = "0.1.0"
 
 _HOME = {
+    "critical_temperature": "gutz.temperature",
+    "exchange_couplings": "gutz.exchange",
     "Mixture": "gutz.model",
     "Phase": "gutz.phases",
     "Solution": "gutz.solution",
-    "Status": "gutz.status",
     "solve": "gutz.solver",
+    "Status": "gutz.status",
 }
 
-__all__ = ["Mixture", "Phase", "Solution", "Status", "solve"]
+__all__ = ["critical_temperature", "exchange_couplings", "Mixture", "Phase", "Solution", "solve", "Status"]
 
 
 def __getattr__(name: str) -> Any:
     if name in _HOME:
+        import_module("gutz.precision")
         return getattr(import_module(_HOME[name]), name)
     raise AttributeError(f"module 'gutz' has no attribute {name!r}")
 

@@ -76,8 +76,7 @@ class Atom:
                 )
         light = (2 * math.pi * constants.c / wavelength) ** 2
         response = sum(
-            line.strength / ((2 * math.pi * constants.c / line.wavelength) ** 2 - light)
-            for line in self.lines
+            line.strength / ((2 * math.pi * constants.c / line.wavelength) ** 2 - light) for line in self.lines
         )
         return constants.e**2 / constants.m_e * response
 
@@ -89,9 +88,7 @@ def check_wavelength(wavelength: float) -> None:
         InputError: outside that range or not finite.
     """
     if not (isinstance(wavelength, Real) and 1e-7 <= wavelength <= 1e-4):
-        raise InputError(
-            f"wavelength: got {wavelength!r} m, must lie between 1e-07 and 0.0001 m (100 nm to 100 µm)."
-        )
+        raise InputError(f"wavelength: got {wavelength!r} m, must lie between 1e-07 and 0.0001 m (100 nm to 100 µm).")
 
 
 def atom_names() -> tuple[str, ...]:
@@ -128,9 +125,7 @@ def _table() -> dict[str, Atom]:
 
 def _atom(name: str, entry: dict[str, object]) -> Atom:
     lines = tuple(
-        Line(_number(entry[f"{d}_nm"]) * 1e-9, _number(entry[f"{d}_f"]))
-        for d in ("d1", "d2")
-        if f"{d}_nm" in entry
+        Line(_number(entry[f"{d}_nm"]) * 1e-9, _number(entry[f"{d}_f"])) for d in ("d1", "d2") if f"{d}_nm" in entry
     )
     return Atom(name, _number(entry["mass_u"]) * ATOMIC_MASS, lines, str(entry["source"]))
 

@@ -19,8 +19,8 @@ from gutz.status import Status
 
 Array = Any
 
-LANES = 256
-"""Eigenproblems worked on side by side: fits the cache, and fills two cores (measured in tests/bench)."""
+LANES = 128
+"""Eigenproblems worked on side by side: more do not fit the cache, fewer cost overhead (measured)."""
 
 ZERO_FIELD = 1e-7
 """Fields that converge below this are zero: what is left of a decaying order."""
@@ -83,11 +83,11 @@ def global_minimum(mixture: Mixture, mu: Array, T: Array, *, n_max: int, sublatt
     p, start = _prepare(mixture, mu, T, n_max=n_max, sublattices=sublattices)
     size, species = start.shape[0], start.shape[-1]
     work = {"n_max": n_max, "lanes": min(size, LANES)}
-    points = jnp.arange(size)
-    best = descent.descend(p, points, start, jnp.asarray(size), **work)
+    points = jnp.arange(size, dtype=jnp.int64)
+    best = descent.descend(p, points, start, jnp.asarray(size, jnp.int64), **work)
     x, F, converged = best.x, best.free_energy, best.converged
     if species == 2:
-        axis = descent.descend(*_each_alone(p, start), **work)
+        axis = descent.descend(*_each_alone(p, jnp.where(x > ZERO_FIELD, x, start)), **work)
         x, F, converged, alone = _take_alone(x, F, converged, axis)
         todo, kicked = _ask_other(x, alone)
         if isinstance(alone, jax.core.Tracer) or bool(alone.any()):
@@ -113,7 +113,7 @@ def _each_alone(p: Sites, start: Array) -> tuple[Sites, Array, Array, Array]:
     energy = jnp.concatenate([jnp.swapaxes(second, -1, -2), second])
     one = Sites(energy, jnp.concatenate([p.z_t[:, :1], p.z_t[:, 1:]]), jnp.tile(p.T, 2))
     starts = jnp.concatenate([start[..., :1], start[..., 1:]])
-    return one, jnp.arange(2 * size), starts, jnp.asarray(2 * size)
+    return one, jnp.arange(2 * size, dtype=jnp.int64), starts, jnp.asarray(2 * size, jnp.int64)
 
 
 @jax.jit
@@ -172,7 +172,8 @@ def _large_fields(p: Sites, mixture: Mixture, space: LocalSpace) -> Array:
     """
     U = jnp.maximum(mixture.U, 1e-3 * (mixture.z_t + jnp.abs(p.energy).max((-1, -2))[:, None] + 1e-300))
     mu = -(p.energy[:, 0, :] * jnp.asarray(_single_atom(space))[:, None, :]).sum(-1).T
-    classical = (mu + mixture.z_t) / U
+    shared = jnp.maximum(mixture.U12, 0.0)[:, None] if space.species == 2 else 0.0
+    classical = (mu + mixture.z_t) / (U + shared)
     return jnp.sqrt(jnp.clip(classical, 0.2, 0.6 * space.n_max)) * jnp.array([1.0, 0.9])[: space.species]
 
 

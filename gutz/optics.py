@@ -174,11 +174,7 @@ class OpticalLattice:
         wanted = {"a11"} if len(self.atoms) == 1 else {"a11", "a22", "a12"}
         for name, value in given.items():
             if (value is None) != (name not in wanted):
-                need = (
-                    "must be given in m for two species"
-                    if value is None
-                    else "must be left out for one species"
-                )
+                need = "must be given in m for two species" if value is None else "must be left out for one species"
                 raise InputError(f"{name}: got {value!r}, {need}.")
         limit = (-self.spacing, self.spacing)
         values = [
@@ -316,9 +312,7 @@ def hubbard_parameters(lattice: OpticalLattice) -> HubbardParameters:
     U = 4 * math.pi * HBAR**2 / masses * a[..., : len(masses)] * own
     U12 = None
     if len(masses) == 2:
-        shared = placed(cross_rows / lattice.spacing, 1 / np.sqrt(math.pi * (width**2).sum(axis=-2))).prod(
-            axis=-1
-        )
+        shared = placed(cross_rows / lattice.spacing, 1 / np.sqrt(math.pi * (width**2).sum(axis=-2))).prod(axis=-1)
         U12 = np.asarray(2 * math.pi * HBAR**2 * (1 / masses).sum() * a[..., 2] * shared)
     flags = _flags(lattice, t, t2_ratio, U, U12, gap, width)
     return HubbardParameters(t, t2_ratio, U, U12, gap, excitation, recoil, flags, lattice.dim)
@@ -356,15 +350,11 @@ def _flags(
     return flags
 
 
-def _per_species(
-    value: PerSpecies, species: int, where: str, limits: tuple[float, float], unit: str
-) -> FloatArray:
+def _per_species(value: PerSpecies, species: int, where: str, limits: tuple[float, float], unit: str) -> FloatArray:
     """Checked values with a trailing species axis."""
     parts = value if isinstance(value, tuple) else (value,) * species
     if len(parts) != species:
-        raise InputError(
-            f"{where}: got a tuple of {len(parts)}, must be one value or {species} (one per species)."
-        )
+        raise InputError(f"{where}: got a tuple of {len(parts)}, must be one value or {species} (one per species).")
     checked = [check_range(part, where, limits, unit) for part in parts]
     try:
         return np.stack(np.broadcast_arrays(*checked), axis=-1)

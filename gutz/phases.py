@@ -57,6 +57,9 @@ MOTT_VARIANCE = 0.15
 """Variance of the total number on a site below which a state without order is called a Mott insulator: the
 value in the atomic limit at k_B T = 0.2 U, where the insulator has melted (Gerbier, PRL 99, 120405 (2007))."""
 
+MOTT_MISMATCH = 0.1
+"""How far the total filling may be from a whole number (1 or more) in a Mott insulator."""
+
 
 def label(
     order_parameter: NDArray[np.float64], filling: NDArray[np.float64], number_variance: NDArray[np.float64]
@@ -69,7 +72,9 @@ def label(
     ordered = np.abs(order_parameter) > ORDER_THRESHOLD
     total_variance = number_variance.sum((-1, -2))
     total_filling = filling.sum(-1)
-    code = np.where(total_variance < MOTT_VARIANCE, Phase.MOTT, Phase.NORMAL)
+    whole = np.maximum(np.round(total_filling), 1.0)
+    mott = (total_variance < MOTT_VARIANCE) & (np.abs(total_filling - whole) < MOTT_MISMATCH)
+    code = np.where(mott, Phase.MOTT, Phase.NORMAL)
     code = np.where(total_filling < EMPTY_THRESHOLD, Phase.VACUUM, code)
     code = np.where(ordered.all(-1), Phase.SUPERFLUID, code)
     if order_parameter.shape[-1] == 2:

@@ -72,4 +72,4 @@ class Solution:
         # xarray takes longer to import than a point takes to solve; only who asks for a dataset pays for it.
         from gutz.dataset import to_dataset
 
-        return to_dataset(self, dims, coords, energy_unit)
+        return to_dataset(self.outputs, dims, coords, energy_unit).assign_attrs(ansatz=self.ansatz)

@@ -16,7 +16,7 @@ import jax.numpy as jnp
 import numpy as np
 
 from gutz import limits, precision, targets
-from gutz.ansatz import gibbs, product
+from gutz.ansatz import descent, gibbs, product
 from gutz.batch import CUTOFF_WEIGHT
 from gutz.errors import InputError
 from gutz.fock import local_space
@@ -25,6 +25,7 @@ from gutz.observables import observe
 from gutz.phases import Phase, label
 from gutz.solution import Solution
 from gutz.status import Status
+from gutz.variables import DRESSED_ONLY, VARIABLES
 
 Array = Any
 
@@ -33,6 +34,9 @@ ANSATZE = ("product",)
 
 CUTOFF_LADDER = {1: (4, 6, 9, 14, 20, 30, 40), 2: (3, 4, 5, 6, 8, 10, 12)}
 """Cutoffs tried in turn when n_max is automatic; a short list, since each is one compilation."""
+
+TOLERANCES = {"residual": descent.TOLERANCE, "target": targets.TARGET_TOLERANCE, "cutoff_weight": CUTOFF_WEIGHT}
+"""What a converged point fulfils, for the record of a run."""
 
 _CHORD_STEPS = 2
 
@@ -67,11 +71,9 @@ def _number_behind(value: Array) -> Array:
 def _solve_numbers(mixture: Mixture) -> tuple[dict[str, np.ndarray], np.ndarray]:
     """Choose the cutoff of every point, solve, and label."""
     size = mixture.shape[0]
-    if mixture.species == 2:
-        gone = limits.collapses(mixture.U, mixture.U12, mixture.n_max)
-    else:
-        gone = np.zeros(size, bool)
-    collector = _Collector(size)
+    two = mixture.species == 2
+    gone = limits.collapses(mixture.U, mixture.U12, mixture.n_max) if two else np.zeros(size, bool)
+    collector = _Collector(mixture)
     todo = np.flatnonzero(~gone)
     ladder = (mixture.n_max,) if mixture.n_max is not None else CUTOFF_LADDER[mixture.species]
     wanted = np.zeros(size) if mixture.n_max is not None else _expected_occupation(mixture)
@@ -97,21 +99,20 @@ def _expected_occupation(mixture: Mixture) -> np.ndarray:
 
 
 class _Collector:
-    """Gathers groups of points with different cutoffs into whole arrays."""
+    """Gathers groups of points with different cutoffs into whole arrays; points never put stay nan."""
 
-    def __init__(self, size: int) -> None:
-        self.size = size
+    def __init__(self, mixture: Mixture) -> None:
+        size = mixture.shape[0]
+        lengths = {"species": mixture.species, "species_": mixture.species, "direction": mixture.dim}
+        self.fields = np.zeros((size, mixture.sublattices, mixture.species))
         self.outputs: dict[str, np.ndarray] = {}
-        self.fields: np.ndarray | None = None
+        for name, variable in VARIABLES.items():
+            if name not in DRESSED_ONLY:
+                shape = (size, *(lengths[d] for d in variable.dims))
+                fill = np.nan if variable.dtype == "float64" else 0
+                self.outputs[name] = np.full(shape, fill, variable.dtype)
 
     def put(self, where: np.ndarray, outputs: dict[str, np.ndarray], fields: np.ndarray, n_max: int) -> None:
-        if self.fields is None:
-            self.fields = np.zeros((self.size, *fields.shape[1:]))
-            self.outputs = {
-                k: np.full((self.size, *v.shape[1:]), 0 if v.dtype.kind == "i" else np.nan, v.dtype)
-                for k, v in outputs.items()
-            }
-            self.outputs["n_max"] = np.zeros(self.size, np.int16)
         self.fields[where] = fields
         for name, values in outputs.items():
             self.outputs[name][where] = values
@@ -119,8 +120,6 @@ class _Collector:
 
     def finish(self, mixture: Mixture, gone: np.ndarray) -> tuple[dict[str, np.ndarray], np.ndarray]:
         """Add labels and the remarks that follow from the parameters alone."""
-        if self.fields is None:
-            raise InputError("U12 is below -sqrt(U1 U2) at every point; the mixture collapses")
         out = self.outputs
         if mixture.species == 2:
             demixing = (mixture.U12 > np.sqrt(mixture.U[:, 0] * mixture.U[:, 1])) & (mixture.n_max != 1)

@@ -23,7 +23,7 @@ from gutz.variables import VARIABLES
 Array = Any
 Numbers = dict[str, np.ndarray]
 
-BATCH_SIZES = (8, LANES, 4096)
+BATCH_SIZES = (8, LANES, 2048)
 """Every call is padded to one of these, so that few shapes are ever compiled."""
 
 DIRECTED = tuple(name for name, variable in VARIABLES.items() if "direction" in variable.dims)
@@ -81,21 +81,23 @@ class _Evaluator:
 
     def __call__(self, where: np.ndarray, mu: np.ndarray, T: np.ndarray) -> Batch:
         """Solve points `where` at mu (len(where), species) and T (len(where),)."""
-        parts = []
-        for begin in range(0, len(where), BATCH_SIZES[-1]):
-            piece = slice(begin, begin + BATCH_SIZES[-1])
-            count = len(where[piece])
-            padded = next(s for s in BATCH_SIZES if s >= count)
-            index = np.concatenate([np.arange(begin, begin + count), np.full(padded - count, begin + count - 1)])
-            chosen = self.mixture[where[index]]
-            batch = solve_batch(chosen, mu[index], T[index], n_max=self.n_max, sublattices=self.sublattices)
-            batch = jax.tree.map(lambda v, count=count: np.asarray(v)[:count], batch)
-            for name in DIRECTED:
-                batch.outputs[name] = batch.outputs[name][..., : self.dim]
-            parts.append(batch)
-        if len(parts) == 1:
-            return parts[0]
+        starts = range(0, len(where), BATCH_SIZES[-1])
+        pieces = [np.arange(begin, min(begin + BATCH_SIZES[-1], len(where))) for begin in starts]
+        if len(pieces) == 1:
+            return self._piece(where, mu, T, pieces[0])
+        parts = [self._piece(where, mu, T, piece) for piece in pieces]
         return jax.tree.map(lambda *v: np.concatenate(v), *parts)
+
+    def _piece(self, where: np.ndarray, mu: np.ndarray, T: np.ndarray, piece: np.ndarray) -> Batch:
+        """Solve one padded batch."""
+        padded = next(s for s in BATCH_SIZES if s >= piece.size)
+        index = np.concatenate([piece, np.full(padded - piece.size, piece[-1])])
+        chosen = self.mixture[where[index]]
+        batch = solve_batch(chosen, mu[index], T[index], n_max=self.n_max, sublattices=self.sublattices)
+        batch = jax.tree.map(lambda v: np.asarray(v)[: piece.size], batch)
+        for name in DIRECTED:
+            batch.outputs[name] = batch.outputs[name][..., : self.dim]
+        return batch
 
 
 def _energy_scale(mixture: Mixture) -> np.ndarray:

@@ -152,9 +152,7 @@ def format_quantity(value: float, kind: str, unit: str | None = None, digits: in
     number = f"{value / _size(unit, kind, 'unit', unit):.{digits}g}"
     if unit == "1":
         return number
-    return (
-        f"{number} \u00b5{unit[1:]}" if unit in ("um", "uK", "us") else f"{number} {unit.translate(_MICRO)}"
-    )
+    return f"{number} \u00b5{unit[1:]}" if unit in ("um", "uK", "us") else f"{number} {unit.translate(_MICRO)}"
 
 
 def _split(text: str, kind: str, field: str, unit: str) -> tuple[float, str]:

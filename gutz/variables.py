@@ -47,3 +47,6 @@ VARIABLES: dict[str, Variable] = {
     "cutoff_weight": Variable((), "1", "Weight at the cutoff", "probability of the highest occupation kept"),
     "residual": Variable((), "1", "Residual", "largest mismatch of the self-consistency conditions"),
 }  # fmt: skip
+
+DRESSED_ONLY = ("dressing",)
+"""Outputs that the product ansatz does not have."""

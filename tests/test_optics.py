@@ -110,13 +110,9 @@ def test_hopping_by_adaptive_quadrature(depth, order):
 
     def level(q):
         diagonal = (q + wave) ** 2 + depth / 2
-        return linalg.eigh_tridiagonal(diagonal, np.full(28, -depth / 4), select="i", select_range=(0, 0))[0][
-            0
-        ]
+        return linalg.eigh_tridiagonal(diagonal, np.full(28, -depth / 4), select="i", select_range=(0, 0))[0][0]
 
-    expected = -integrate.quad(
-        lambda q: level(q) * math.cos(order * math.pi * q), 0, 1, epsabs=1e-12, limit=200
-    )[0]
+    expected = -integrate.quad(lambda q: level(q) * math.cos(order * math.pi * q), 0, 1, epsabs=1e-12, limit=200)[0]
     solved = bands(depth)
     assert float(solved.t if order == 1 else solved.t2) == pytest.approx(expected, abs=2e-12)
 
@@ -218,9 +214,7 @@ def test_a_batch_is_the_same_as_its_points(depths):
 
 def test_equal_species_share_one_overlap():
     """m1 = m2 = m, a12 = a11: U12 = U1 = U2, since 2πħ²/μ = 4πħ²/m."""
-    lattice = two_species(
-        atoms=(RB, RB), axes=StandingWave(np.array([2.0, 9.0, 40.0])), a22=100 * A0, a12=100 * A0
-    )
+    lattice = two_species(atoms=(RB, RB), axes=StandingWave(np.array([2.0, 9.0, 40.0])), a22=100 * A0, a12=100 * A0)
     solved = hubbard_parameters(lattice)
     np.testing.assert_allclose(solved.U[:, 0], solved.U[:, 1], rtol=1e-14)
     np.testing.assert_allclose(solved.U12, solved.U[:, 0], rtol=1e-13)
@@ -266,9 +260,7 @@ def test_harmonic_axes_by_closed_form():
 
 def test_deep_lattice_confines_like_its_harmonic_bottom():
     """A trap of frequency 2√s E_R/h gives a U higher than s E_R do by the anharmonic 7/(32√s) per axis."""
-    deep = hubbard_parameters(
-        one_species(axes=(StandingWave(8.0), StandingWave(150.0), StandingWave(150.0)), dim=1)
-    )
+    deep = hubbard_parameters(one_species(axes=(StandingWave(8.0), StandingWave(150.0), StandingWave(150.0)), dim=1))
     trap = Harmonic(2 * math.sqrt(150) * float(deep.recoil_hz[0]))
     smooth = hubbard_parameters(one_species(axes=(StandingWave(8.0), trap, trap), dim=1))
     assert smooth.U[0] / deep.U[0] - 1 == pytest.approx(2 * 7 / (32 * math.sqrt(150)), rel=0.1)
@@ -315,9 +307,7 @@ def test_batches_broadcast():
     point = hubbard_parameters(two_species(StandingWave((float(depth[3, 0]), 10.0)), a12=length[1]))
     np.testing.assert_allclose(solved.U12[3, 1], point.U12, rtol=1e-12)
     np.testing.assert_allclose(solved.t[3, 1], point.t, rtol=1e-12)
-    assert all(
-        np.isfinite(v).all() for v in (solved.t, solved.t2_ratio, solved.U, solved.U12, solved.band_gap)
-    )
+    assert all(np.isfinite(v).all() for v in (solved.t, solved.t2_ratio, solved.U, solved.U12, solved.band_gap))
 
 
 def test_energies_in_other_units():
@@ -483,9 +473,7 @@ def test_every_atom_is_complete():
 
 
 def test_recoil_energy_definition():
-    assert recoil_energy(1064e-9, RB.mass) == pytest.approx(
-        (constants.h / 1064e-9) ** 2 / (2 * RB.mass), rel=1e-15
-    )
+    assert recoil_energy(1064e-9, RB.mass) == pytest.approx((constants.h / 1064e-9) ** 2 / (2 * RB.mass), rel=1e-15)
 
 
 def test_depth_ratio_is_antisymmetric_and_trivial_for_equals():

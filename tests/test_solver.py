@@ -54,9 +54,7 @@ def plain_minimum(points, starts=((1.0, 0.9), (1.2, 0.05), (0.05, 1.2), (0.1, 0.
     energy = plain_loop.site_energies(points["U"], points["U12"], points["mu"], N_MAX)
     for start in starts:
         for i, T in enumerate(points["T"]):
-            _, F, _ = plain_loop.loop(
-                energy[i : i + 1], Z * points["t"][i : i + 1], float(T), N_MAX, 1e-9, 4000, start
-            )
+            _, F, _ = plain_loop.loop(energy[i : i + 1], Z * points["t"][i : i + 1], float(T), N_MAX, 1e-9, 4000, start)
             best[i] = min(best[i], F[0])
     return best
 
@@ -218,9 +216,8 @@ def test_second_derivatives_of_the_free_energy_at_generic_and_symmetric_points()
         H = np.asarray(jax.hessian(F)(p))
         assert np.isfinite(H).all()
         np.testing.assert_allclose(H, H.T, atol=1e-9 * np.abs(H).max())
-        grad = jax.grad(F)
         for i in (0, 3, 5):
-            column = five_point(lambda q: np.asarray(grad(jnp.asarray(q))), np.asarray(p), i, 1e-4)
+            column = five_point(lambda q: np.asarray(jax.grad(F)(jnp.asarray(q))), np.asarray(p), i, 1e-4)
             np.testing.assert_allclose(H[i], column, atol=2e-7 * np.abs(H).max())
 
 
@@ -245,14 +242,11 @@ def test_species_without_coupling_are_two_single_species():
     t, mu, T = np.linspace(0.0, 0.06, 8), np.linspace(-0.1, 1.3, 8), np.linspace(0.0, 0.2, 8)
     both = gutz.solve(gutz.Mixture(t=(t, t), U=(1.0, 0.8), U12=0.0, mu=(mu, mu[::-1]), T=T, n_max=N_MAX))
     alone = [
-        gutz.solve(gutz.Mixture(t=t, U=U, mu=m, T=T, species=1, n_max=N_MAX))
-        for U, m in ((1.0, mu), (0.8, mu[::-1]))
+        gutz.solve(gutz.Mixture(t=t, U=U, mu=m, T=T, species=1, n_max=N_MAX)) for U, m in ((1.0, mu), (0.8, mu[::-1]))
     ]
     np.testing.assert_allclose(both.free_energy, alone[0].free_energy + alone[1].free_energy, atol=1e-12)
     ordered = np.abs(alone[0].order_parameter[:, 0]) > 1e-3
-    np.testing.assert_allclose(
-        both.order_parameter[ordered, 0], alone[0].order_parameter[ordered, 0], atol=1e-8
-    )
+    np.testing.assert_allclose(both.order_parameter[ordered, 0], alone[0].order_parameter[ordered, 0], atol=1e-8)
 
 
 def test_hard_core_particle_hole_symmetry():

@@ -44,9 +44,7 @@ def test_sizes_are_codata(text, kind, expected, tolerance):
 def test_one_nanokelvin_is_twenty_hertz():
     """k_B × 1 nK = h × 20.836619... Hz, from the exact constants of the SI (2019)."""
     exact = Fraction(1380649, 10**38) / Fraction(662607015, 10**42)
-    assert from_si(parse_quantity("1 nK", "energy", "x"), "energy", "Hz") == pytest.approx(
-        float(exact), rel=1e-15
-    )
+    assert from_si(parse_quantity("1 nK", "energy", "x"), "energy", "Hz") == pytest.approx(float(exact), rel=1e-15)
 
 
 def test_bare_numbers_are_in_the_declared_unit():

@@ -31,6 +31,8 @@ a manifold that is degenerate without fields, make smaller differences meaningle
 MAX_STEPS = 120
 
 _LARGEST_STEP = 1.0
+_LAST_STEP = 1e-6
+_SAFELY_CONVEX = 0.9
 
 
 class Minimum(NamedTuple):
@@ -140,11 +142,16 @@ def descend(p: Sites, point: Array, start: Array, count: Array, *, n_max: int, l
         stretch = jnp.where(plain, 2.0 * lane.stretch, 1.0)
 
         # A residual bounds the error in x only together with the curvature: ask the Newton step to be small too.
-        settled = (size <= tol) & ((soft >= 1.0) | (jnp.abs(newton).max((-1, -2)) <= 1e3 * tol))
-        settled = settled & ~rejected
+        step = jnp.abs(newton).max((-1, -2))
+        settled = (size <= tol) & ((soft >= 1.0) | (step <= 1e3 * tol)) & ~rejected
+        # Newton squares the error: a step this small lands on the minimum, there is no need to look again.
+        last_step = use_newton & (soft < _SAFELY_CONVEX) & (step <= _LAST_STEP)
+        settled = settled | last_step
         finished = settled | (lane.steps >= MAX_STEPS) | ~jnp.isfinite(look.free_energy)
         where = jnp.where(finished & (lane.job < count), lane.job, jobs)
-        result = Minimum(lane.x, look.free_energy, size, soft, settled, lane.steps)
+        result = Minimum(
+            jnp.where(last_step[:, None, None], newton_x, lane.x), look.free_energy, size, soft, settled, lane.steps
+        )
         out = Minimum(*(o.at[where].set(v, mode="drop") for o, v in zip(out, result, strict=True)))
 
         rank = jnp.cumsum(finished) - 1

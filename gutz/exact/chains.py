@@ -144,9 +144,7 @@ def hard_core_chain(model: LatticeModel, T: float = 0.0, N: int | None = None) -
     """
     sites = model.cluster.sites
     if model.species != 1 or model.cutoff != (1,):
-        raise InputError(
-            f"model: got {model.species} species with n_max = {model.cutoff}, must be one with n_max = 1."
-        )
+        raise InputError(f"model: got {model.species} species with n_max = {model.cutoff}, must be one with n_max = 1.")
     if not model.cluster.is_open_chain:
         raise InputError("cluster: the bonds are not those of an open chain, (i, i + 1), as they must be.")
     if not (np.isfinite(T) and T >= 0) or (N is not None and T > 0):

@@ -169,8 +169,7 @@ def _bases(model: LatticeModel, numbers: Numbers) -> list[OneSpeciesBasis]:
 
 def _sector_size(model: LatticeModel, numbers: Numbers) -> int:
     sizes = [
-        count_states(model.cluster.sites, cutoff, atoms)
-        for cutoff, atoms in zip(model.cutoff, numbers, strict=True)
+        count_states(model.cluster.sites, cutoff, atoms) for cutoff, atoms in zip(model.cutoff, numbers, strict=True)
     ]
     return int(np.prod(np.array(sizes, dtype=object)))
 

@@ -37,9 +37,7 @@ class Cluster:
     def __post_init__(self) -> None:
         for i, j in self.bonds:
             if not (0 <= i < self.sites and 0 <= j < self.sites) or i == j:
-                raise InputError(
-                    f"bonds: got ({i}, {j}), must join two different sites out of 0..{self.sites - 1}."
-                )
+                raise InputError(f"bonds: got ({i}, {j}), must join two different sites out of 0..{self.sites - 1}.")
 
     @property
     def sites(self) -> int:
@@ -162,8 +160,7 @@ class LatticeModel:
             array = np.asarray(value, dtype=float)
             if array.shape not in ((), (count,)):
                 raise InputError(
-                    f"{name}: got shape {array.shape} for one species, must be one number or one per {what}"
-                    f" ({count})."
+                    f"{name}: got shape {array.shape} for one species, must be one number or one per {what} ({count})."
                 )
             if not np.all(np.isfinite(array)):
                 raise InputError(f"{name}: got {value}, must be finite.")

@@ -331,8 +331,7 @@ class _Sweeper:
 
         def allowed(q: Charge) -> bool:
             return all(
-                0 <= total - x <= beyond * most
-                for x, total, most in zip(q, self.total, self.model.cutoff, strict=True)
+                0 <= total - x <= beyond * most for x, total, most in zip(q, self.total, self.model.cutoff, strict=True)
             )
 
         onsite = onsite_energies(self.model, self.space, i)

@@ -32,9 +32,7 @@ FOUR_BODY_LIMIT = 72
 def _check_species(state: TensorChain, *species: int) -> None:
     for a in species:
         if not 0 <= a < state.space.species:
-            raise InputError(
-                f"species: got {a}, must be within 0..{state.space.species - 1} (counted from 0)."
-            )
+            raise InputError(f"species: got {a}, must be within 0..{state.space.species - 1} (counted from 0).")
 
 
 def _need_two(state: TensorChain, name: str) -> None:

@@ -160,9 +160,7 @@ class _Evolver:
 
     def _complete(self, back: _Leg, front: _Leg) -> Matrices:
         return {
-            q: np.empty((rows, front.sizes[_minus(q)]))
-            for q, rows in back.sizes.items()
-            if _minus(q) in front.sizes
+            q: np.empty((rows, front.sizes[_minus(q)])) for q, rows in back.sizes.items() if _minus(q) in front.sizes
         }
 
     def split(self) -> tuple[Matrices, Matrices]:
@@ -280,6 +278,4 @@ def thermal_state(
     tensors = evolver.left_orthonormal()
     chain = TensorChain(fock_space(model.cutoff, doubled=True), tensors)
     mean = energy(model, chain)
-    return ThermalChain(
-        chain.space, tensors, model, T, free_energy, mean, (mean - free_energy) / T, evolver.discarded
-    )
+    return ThermalChain(chain.space, tensors, model, T, free_energy, mean, (mean - free_energy) / T, evolver.discarded)

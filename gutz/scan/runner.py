@@ -24,12 +24,10 @@ import zarr
 from filelock import FileLock, Timeout
 
 from gutz.errors import InputError, OutputError, ResourceError
-from gutz.limits import collapses
 from gutz.model import Mixture
-from gutz.phases import Phase
 from gutz.scan import document, paths, schema, spec, store
 from gutz.scan.plan import Plan, check_physics, plan
-from gutz.solver import solve
+from gutz.solver import TOLERANCES, solve
 from gutz.status import UNTRUSTED, Status
 
 LOCK = ".lock"
@@ -122,7 +120,7 @@ def run(
         if resume and store.exists(folder):
             target = store.Store.reopen(folder, full)
         else:
-            target = store.Store.create(folder, full, source, {})
+            target = store.Store.create(folder, full, source, TOLERANCES)
         return _work(folder, full, target, progress, notice, executor or Here(), in_flight)
 
 
@@ -139,23 +137,8 @@ def compute_chunk(full: Plan, index: Sequence[int]) -> dict[str, Any]:
     if found is not None:
         values["cautions"] = np.broadcast_to(found.flags, mixture.shape)
     names = [name for name in schema.layout(full) if name not in values]
-    if full.spec.species == 2 and np.all(collapses(mixture.U, mixture.U12, mixture.n_max)):
-        return values | _collapsed(full, names)
     solution = solve(mixture, ansatz=full.spec.ansatz.kind)
     return values | {name: np.asarray(getattr(solution, name)) for name in names}
-
-
-def _collapsed(full: Plan, names: Sequence[str]) -> dict[str, Any]:
-    """Outputs of a chunk in which nothing can be solved: no numbers, and the status that says why."""
-    fields, sizes = schema.layout(full), schema.sizes(full)
-    values: dict[str, Any] = {}
-    for name in names:
-        trailing = fields[name].dims[len(full.chunk) :]
-        shape = (*full.chunk, *(sizes[dim] for dim in trailing))
-        values[name] = np.full(shape, np.nan if fields[name].dtype == "float64" else 0, fields[name].dtype)
-    values["status"][...] = int(Status.COLLAPSE)
-    values["phase"][...] = int(Phase.COLLAPSE)
-    return values
 
 
 def _work(

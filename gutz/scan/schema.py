@@ -11,11 +11,10 @@ from typing import Any, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from gutz import attributes
 from gutz.optics import Caution
-from gutz.phases import WORDS, Phase
 from gutz.scan.plan import Plan
-from gutz.status import Status
-from gutz.variables import ENERGY, VARIABLES
+from gutz.variables import DRESSED_ONLY, ENERGY, VARIABLES
 
 VERSION = 1
 """Version of the layout of stored runs; it changes when an older `gutz` could misread a newer run."""
@@ -23,8 +22,7 @@ VERSION = 1
 NOT_COMPUTED = -1
 """Status of a point whose chunk has not been written."""
 
-
-ABSENT = {"product": ("dressing",)}
+ABSENT = {"product": DRESSED_ONLY}
 """Outputs that an ansatz does not have."""
 
 
@@ -59,7 +57,7 @@ def coordinates(plan: Plan) -> dict[str, tuple[NDArray[Any], dict[str, Any]]]:
     found["species_"] = (species, {"units": "1", "long_name": "Species (second index)"})
     found["direction"] = (
         np.arange(1, plan.spec.dim + 1, dtype=np.int8),
-        {"units": "1", "long_name": "Direction", "flag_values": [1, 2, 3], "flag_meanings": "x y z"},
+        dict(attributes.DIRECTIONS),
     )
     return found
 
@@ -82,22 +80,16 @@ def layout(plan: Plan) -> dict[str, Field]:
             found[name] = Field(
                 (*grid, *dims),
                 "float64",
-                {"units": _units(units, unit), "long_name": words, "description": "parameter of the model"},
+                {
+                    "units": attributes.with_energy(units, unit),
+                    "long_name": words,
+                    "description": "parameter of the model",
+                },
             )
     if plan.spec.lattice is not None:
-        found["cautions"] = Field((*grid,), "int32", _flags(Caution, "Cautions about the lattice"))
+        found["cautions"] = Field((*grid,), "int32", attributes.of_flags(Caution, "Cautions about the lattice"))
     for name, variable in VARIABLES.items():
-        attributes: dict[str, Any] = {
-            "units": _units(variable.units, unit),
-            "long_name": variable.long_name,
-            "description": variable.description,
-        }
-        if name == "phase":
-            attributes["flag_values"] = [int(phase) for phase in Phase]
-            attributes["flag_meanings"] = " ".join(WORDS[phase].replace(" ", "_") for phase in Phase)
-        elif name == "status":
-            attributes |= _flags(Status, variable.long_name)
-        found[name] = Field((*grid, *variable.dims), variable.dtype, attributes)
+        found[name] = Field((*grid, *variable.dims), variable.dtype, attributes.of_output(name, unit))
     for name in (*grid, *ABSENT.get(plan.spec.ansatz.kind, ())):
         found.pop(name, None)
     status = found.pop("status")
@@ -113,10 +105,10 @@ def bytes_per_point(plan: Plan) -> int:
     )
 
 
-def to_attributes(attributes: Mapping[str, Any]) -> dict[str, Any]:
+def to_attributes(given: Mapping[str, Any]) -> dict[str, Any]:
     """Attributes a netCDF file can hold: texts, numbers, number arrays; anything else becomes JSON text."""
     kept: dict[str, Any] = {}
-    for key, value in attributes.items():
+    for key, value in given.items():
         if isinstance(value, str | int | float | np.number | np.ndarray) and not isinstance(value, bool):
             kept[key] = value
         elif isinstance(value, list) and value and all(type(part) is int for part in value):
@@ -124,19 +116,3 @@ def to_attributes(attributes: Mapping[str, Any]) -> dict[str, Any]:
         else:
             kept[key] = json.dumps(value, sort_keys=True, default=str)
     return kept
-
-
-def _units(units: str, energy: str) -> str:
-    """Fill the run's energy unit in; energies without a name are plain numbers."""
-    filled = units.replace(ENERGY, energy)
-    return "1" if filled == "1 / 1" else filled
-
-
-def _flags(kind: Any, words: str) -> dict[str, Any]:
-    bits = [bit for bit in kind if int(bit)]
-    return {
-        "units": "1",
-        "long_name": words,
-        "flag_masks": [int(bit) for bit in bits],
-        "flag_meanings": " ".join(str(bit.name).lower() for bit in bits),
-    }

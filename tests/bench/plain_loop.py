@@ -61,7 +61,10 @@ def loop(
     most: int = 20000,
     start: tuple[float, float] = (1.0, 0.9),
 ) -> tuple[Vector, Vector, int]:
-    """Point by point, the first from `start`, each other from the point before. Returns phi (points, 2), F (points,), eigenproblems."""
+    """Point by point, the first from `start`, each other from the point before.
+
+    Returns phi (points, 2), F (points,), number of eigenproblems.
+    """
     b1, b2, _, _ = PlainSite(n_max).operators
     f1, f2 = b1 + b1.T, b2 + b2.T
     phi = np.array(start)

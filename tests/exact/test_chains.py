@@ -75,9 +75,7 @@ def test_xxz_rings_approach_the_infinite_chain(delta):
     """e_L = e_inf - pi v/(6 L^2) + O(L^-4) (Bloete et al. 1986, Affleck 1986) and the charging energy
     E(N+1) + E(N-1) - 2E(N) = pi v/(K L): e, v and K against spin rings of 10 and 14 sites."""
     v, K = chains.xxz_velocity(delta), chains.xxz_luttinger(delta)
-    errors = [
-        xxz_ring(n, delta, n // 2) / n - (chains.xxz_energy(delta) - np.pi * v / (6 * n**2)) for n in (10, 14)
-    ]
+    errors = [xxz_ring(n, delta, n // 2) / n - (chains.xxz_energy(delta) - np.pi * v / (6 * n**2)) for n in (10, 14)]
     assert abs(errors[1]) < 3e-4
     assert errors[1] / errors[0] == pytest.approx((10 / 14) ** 4, rel=0.25)
     charging = 2 * (xxz_ring(14, delta, 8) - xxz_ring(14, delta, 7))
@@ -111,9 +109,7 @@ def test_mixture_at_stored_points(U12, energy, gap):
 @pytest.mark.parametrize("U12", [1.5, 4.0, 9.0])
 def test_both_published_forms_of_the_gap_agree(U12):
     """Lieb & Wu's Bessel form, U - 4t + 8t int J1(w) / (w (1 + exp(w U/2t))), by mpmath."""
-    area = mpmath.quad(
-        lambda w: mpmath.besselj(1, w) / (w * (1 + mpmath.exp(w * U12 / 2))), [0, 2, 10, 30, 60, 100]
-    )
+    area = mpmath.quad(lambda w: mpmath.besselj(1, w) / (w * (1 + mpmath.exp(w * U12 / 2))), [0, 2, 10, 30, 60, 100])
     assert chains.mixture_gap(1.0, U12) == pytest.approx(float(U12 - 4 + 8 * area), abs=1e-9)
 
 

@@ -45,9 +45,7 @@ def test_one_atom_sees_the_lattice_dispersion(shape):
 def test_two_atoms_on_two_sites():
     U, t = 3.7, 0.8
     root = np.sqrt(U**2 / 4 + 4 * t**2)  # 2x2 even sector; the odd combination keeps energy U
-    assert ed.spectrum(single(chain(2), t, U), 2) == pytest.approx(
-        sorted([U / 2 - root, U, U / 2 + root]), abs=1e-12
-    )
+    assert ed.spectrum(single(chain(2), t, U), 2) == pytest.approx(sorted([U / 2 - root, U, U / 2 + root]), abs=1e-12)
 
 
 def test_one_atom_of_each_species_on_two_sites():
@@ -55,8 +53,7 @@ def test_one_atom_of_each_species_on_two_sites():
     model = LatticeModel(chain(2), t=(t1, t2), U=(5.0, 6.0), U12=U12, n_max=2)
     # Even and odd sectors are 2x2 with couplings t1 + t2 and t1 - t2 (solved by hand).
     expected = [
-        U12 / 2 + sign * np.sqrt(U12**2 / 4 + (t1 + parity * t2) ** 2)
-        for sign, parity in product((1, -1), (1, -1))
+        U12 / 2 + sign * np.sqrt(U12**2 / 4 + (t1 + parity * t2) ** 2) for sign, parity in product((1, -1), (1, -1))
     ]
     assert ed.spectrum(model, (1, 1)) == pytest.approx(sorted(expected), abs=1e-12)
 
@@ -305,9 +302,7 @@ def test_derivatives_of_the_grand_potential():
     T, step = 0.8, 1e-4
 
     def at(mu1=0.3, temperature=T):
-        model = LatticeModel(
-            ring(3), t=(1.0, 0.4), U=(2.0, 3.0), U12=-1.1, mu=([mu1, 0.3, 0.1], -0.2), n_max=2
-        )
+        model = LatticeModel(ring(3), t=(1.0, 0.4), U=(2.0, 3.0), U12=-1.1, mu=([mu1, 0.3, 0.1], -0.2), n_max=2)
         return ed.thermal(model, temperature)
 
     state = at()

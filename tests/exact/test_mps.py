@@ -90,9 +90,7 @@ def test_truncated_state_reports_its_own_energy_and_variance():
     vector = np.zeros((bases[0].size, bases[1].size))
     for word, amplitude in words.items():
         occupation = np.array([state.space.physical[s] for s in word])
-        place = [
-            np.flatnonzero((bases[a].occupations == occupation[:, a]).all(axis=1)).item() for a in range(2)
-        ]
+        place = [np.flatnonzero((bases[a].occupations == occupation[:, a]).all(axis=1)).item() for a in range(2)]
         vector[tuple(place)] = amplitude
     flat = vector.ravel()
     assert np.linalg.norm(flat) == pytest.approx(1.0, abs=1e-12)
@@ -127,8 +125,7 @@ def test_mott_energy_series_on_long_chains():
     coefficient came out as 114 (own run), 300 allowed; the x^8 term alone is 80 times that bound."""
     x = 0.05
     energies = [
-        mps.ground_state(LatticeModel(chain(L), t=(x,), U=(1.0,), n_max=5), L, cutoff=1e-16).energy
-        for L in (12, 16)
+        mps.ground_state(LatticeModel(chain(L), t=(x,), U=(1.0,), n_max=5), L, cutoff=1e-16).energy for L in (12, 16)
     ]
     bulk = (energies[1] - energies[0]) / 4
     series = -4 * x**2 + 4 * x**4 + 272 / 9 * x**6 - 5068 / 81 * x**8
@@ -195,9 +192,7 @@ def test_unsettled_runs_say_so():
 WARM = [
     (LatticeModel(chain(4), t=(1.0,), U=(3.0,), mu=([0.6, 0.2, -0.3, 0.4],), n_max=2), 0.7),
     (
-        LatticeModel(
-            chain(3), t=([1.0, 0.8], 0.6), U=(3.0, 4.0), U12=-1.5, mu=([0.1, 0.2, -0.3], 0.2), n_max=1
-        ),
+        LatticeModel(chain(3), t=([1.0, 0.8], 0.6), U=(3.0, 4.0), U12=-1.5, mu=([0.1, 0.2, -0.3], 0.2), n_max=1),
         0.5,
     ),
     (LatticeModel(chain(2), t=(0.5, 0.3), U=(1.0, 2.0), U12=0.4, mu=(0.3, 0.1), n_max=2), 0.9),

@@ -109,9 +109,7 @@ def test_critical_depths_of_rubidium(wavelength, ratio, depth):
 )
 def test_energy_scales_of_rubidium(wavelength, depths, t, U):
     """t/h and U/h in Hz, a = 100.4 a0 (own computation, to the printed digits)."""
-    lattice = OpticalLattice(
-        wavelength, (atom("87Rb"),), StandingWave(np.array(depths, dtype=float)), 100.4 * A0
-    )
+    lattice = OpticalLattice(wavelength, (atom("87Rb"),), StandingWave(np.array(depths, dtype=float)), 100.4 * A0)
     energies = hubbard_parameters(lattice).energies_in("Hz")
     np.testing.assert_allclose(energies["t"][:, 0, 0], t, atol=5.1e-3)
     np.testing.assert_allclose(energies["U"][:, 0], U, atol=5.1e-2)
@@ -123,9 +121,7 @@ def test_light_shift_vanishes_between_the_lines(name, tune_out):
     arXiv:1107.2060, numbers from memory (high confidence). The core's and higher lines' share, which two
     lines leave out, moves the zero by up to 0.1 nm: hence 0.15 nm."""
     d1, d2 = atom(name).lines
-    zero = optimize.brentq(
-        atom(name).polarisability, d2.wavelength + 1e-10, d1.wavelength - 1e-10, xtol=1e-15
-    )
+    zero = optimize.brentq(atom(name).polarisability, d2.wavelength + 1e-10, d1.wavelength - 1e-10, xtol=1e-15)
     assert zero * 1e9 == pytest.approx(tune_out, abs=0.15)
 
 

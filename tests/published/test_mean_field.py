@@ -44,9 +44,7 @@ def test_tips_of_the_lobes():
     """(U/zt)_c = 2n + 1 + 2 sqrt(n(n+1)) at mu/U = sqrt(n(n+1)) - 1; for n = 1 z t/U = 0.17157."""
     n = np.array([1, 2, 3])
     mu = np.sqrt(n * (n + 1)) - 1
-    edge = bisect(
-        lambda zt: has_order(t=zt / 6, U=1.0, mu=mu, species=1, dim=3, n_max=6), np.zeros(3), np.full(3, 0.3)
-    )
+    edge = bisect(lambda zt: has_order(t=zt / 6, U=1.0, mu=mu, species=1, dim=3, n_max=6), np.zeros(3), np.full(3, 0.3))
     np.testing.assert_allclose(1 / edge, 2 * n + 1 + 2 * np.sqrt(n * (n + 1)), rtol=1e-7)
     assert abs(edge[0] - 0.17157) < 5e-6
 
