@@ -43,9 +43,8 @@ def main() -> None:
     wall, cpu = time.perf_counter() - begin, time.process_time() - cpu
     per_point = wall / t.size * 1e6
     print(f"gutz, {t.size} points: {per_point:.0f} us per point ({cpu / t.size * 1e6:.0f} us of processor)")
-    print(
-        f"  first call with compilation {first:.1f} s; compilations after it: {descent.descend._cache_size() - compiled}"
-    )
+    later = descent.descend._cache_size() - compiled
+    print(f"  first call with compilation {first:.1f} s; compilations after it: {later}")
 
     some = np.arange(0, t.size, 25)
     energy = plain_loop.site_energies(
