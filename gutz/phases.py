@@ -5,6 +5,7 @@ Out: integer labels (`Phase`), with words for people. Labels follow from the num
 No heavy imports, so that figures and the command line can name phases without the solver.
 """
 
+from collections.abc import Mapping
 from enum import IntEnum
 
 import numpy as np
@@ -61,14 +62,17 @@ MOTT_MISMATCH = 0.1
 """How far the total filling may be from a whole number (1 or more) in a Mott insulator."""
 
 
-def label(
-    order_parameter: NDArray[np.float64], filling: NDArray[np.float64], number_variance: NDArray[np.float64]
-) -> NDArray[np.int8]:
-    """Label points of the product ansatz.
+PAIR_THRESHOLD = 1e-3
+"""Local <b_1 b_2> or <b_1† b_2> above which a state without single-particle order is paired or counterflow."""
 
-    order_parameter, filling: shape (..., species); number_variance: shape (..., species, species).
-    Points with nan are UNDECIDED.
-    """
+STAGGER_THRESHOLD = 1e-4
+"""Sublattice density difference above which there is a density wave."""
+
+
+def label(outputs: Mapping[str, NDArray[np.float64]]) -> NDArray[np.int8]:
+    """Label points from the outputs of `gutz.variables`, arrays of any batch shape; points with nan are UNDECIDED."""
+    order_parameter, filling = outputs["order_parameter"], outputs["filling"]
+    number_variance = outputs["number_variance"]
     ordered = np.abs(order_parameter) > ORDER_THRESHOLD
     total_variance = number_variance.sum((-1, -2))
     total_filling = filling.sum(-1)
@@ -76,9 +80,18 @@ def label(
     mott = (total_variance < MOTT_VARIANCE) & (np.abs(total_filling - whole) < MOTT_MISMATCH)
     code = np.where(mott, Phase.MOTT, Phase.NORMAL)
     code = np.where(total_filling < EMPTY_THRESHOLD, Phase.VACUUM, code)
+    staggered = np.abs(outputs["staggering"]) > STAGGER_THRESHOLD
+    code = np.where(staggered.any(-1), Phase.DENSITY_WAVE, code)
+    if order_parameter.shape[-1] == 2:
+        opposite = staggered.all(-1) & (outputs["staggering"].prod(-1) < 0)
+        code = np.where(opposite, Phase.NEEL, code)
+        code = np.where(outputs["pair_order"] > PAIR_THRESHOLD, Phase.PAIRED, code)
+        code = np.where(outputs["antipair_order"] > PAIR_THRESHOLD, Phase.COUNTERFLOW, code)
     code = np.where(ordered.all(-1), Phase.SUPERFLUID, code)
     if order_parameter.shape[-1] == 2:
         code = np.where(ordered[..., 0] & ~ordered[..., 1], Phase.SUPERFLUID_1, code)
         code = np.where(~ordered[..., 0] & ordered[..., 1], Phase.SUPERFLUID_2, code)
+    moving = np.isin(code, (Phase.PAIRED, Phase.COUNTERFLOW)) | ordered.any(-1)
+    code = np.where(moving & staggered.any(-1), Phase.SUPERSOLID, code)
     code = np.where(np.isfinite(total_filling) & np.isfinite(total_variance), code, Phase.UNDECIDED)
     return code.astype(np.int8)

@@ -25,11 +25,11 @@ from gutz.observables import observe
 from gutz.phases import Phase, label
 from gutz.solution import Solution
 from gutz.status import Status
-from gutz.variables import DRESSED_ONLY, VARIABLES
+from gutz.variables import ABSENT, VARIABLES
 
 Array = Any
 
-ANSATZE = ("product",)
+ANSATZE = ("product", "dressed")
 """Names accepted for `ansatz`."""
 
 CUTOFF_LADDER = {1: (4, 6, 9, 14, 20, 30, 40), 2: (3, 4, 5, 6, 8, 10, 12)}
@@ -44,19 +44,24 @@ _CHORD_STEPS = 2
 def solve(mixture: Mixture, ansatz: str = "product") -> Solution:
     """Minimise the variational free energy for every point of `mixture`.
 
-    ansatz: "product" (Gutzwiller, an upper bound). Returns a Solution of the mixture's batch shape. Raises
+    ansatz: "product" (Gutzwiller, an upper bound) or "dressed" (hopping to second order, which sees paired and
+    counterflow order). Returns a Solution of the mixture's batch shape. Raises
     InputError for an unknown ansatz, or under jit where something is left automatic.
     """
     precision.check_double()
     if ansatz not in ANSATZE:
         raise InputError(f"ansatz is {ansatz!r}; it must be one of: {', '.join(ANSATZE)}")
     flat = mixture.flat()
+    if ansatz != "product" and any(isinstance(v, jax.core.Tracer) for v in jax.tree.leaves(flat)):
+        raise InputError(
+            f"ansatz is {ansatz!r}; only 'product' can be differentiated or used inside jax.jit and jax.vmap"
+        )
     concrete = flat.map(_number_behind)
     if any(isinstance(v, jax.core.Tracer) for v in jax.tree.leaves(concrete)):
         outputs, fields = _solve_inside_jit(flat)
     else:
         values = concrete.map(np.asarray)
-        outputs, fields = _solve_numbers(values)
+        outputs, fields = _solve_numbers(values, ansatz)
         if any(isinstance(v, jax.core.Tracer) for v in jax.tree.leaves(flat)):
             outputs = _attach_derivatives(flat, values, outputs, fields)
     shaped = {name: v.reshape(mixture.shape + v.shape[1:]) for name, v in outputs.items()}
@@ -68,12 +73,12 @@ def _number_behind(value: Array) -> Array:
     return jax.lax.stop_gradient(value) if isinstance(value, jax.core.Tracer) else value
 
 
-def _solve_numbers(mixture: Mixture) -> tuple[dict[str, np.ndarray], np.ndarray]:
+def _solve_numbers(mixture: Mixture, ansatz: str) -> tuple[dict[str, np.ndarray], np.ndarray]:
     """Choose the cutoff of every point, solve, and label."""
     size = mixture.shape[0]
     two = mixture.species == 2
     gone = limits.collapses(mixture.U, mixture.U12, mixture.n_max) if two else np.zeros(size, bool)
-    collector = _Collector(mixture)
+    collector = _Collector(mixture, ansatz)
     todo = np.flatnonzero(~gone)
     ladder = (mixture.n_max,) if mixture.n_max is not None else CUTOFF_LADDER[mixture.species]
     wanted = np.zeros(size) if mixture.n_max is not None else _expected_occupation(mixture)
@@ -81,7 +86,7 @@ def _solve_numbers(mixture: Mixture) -> tuple[dict[str, np.ndarray], np.ndarray]
         last = step == len(ladder) - 1
         now = todo if last else todo[wanted[todo] <= n_max - 2]
         if now.size:
-            outputs, fields = targets.solve_points(mixture[now], n_max=n_max)
+            outputs, fields = targets.solve_points(mixture[now], n_max=n_max, ansatz=ansatz)
             collector.put(now, outputs, fields, n_max)
             full = np.zeros(now.size, bool) if last else outputs["cutoff_weight"] > CUTOFF_WEIGHT
             todo = np.union1d(np.setdiff1d(todo, now), now[full])
@@ -101,13 +106,13 @@ def _expected_occupation(mixture: Mixture) -> np.ndarray:
 class _Collector:
     """Gathers groups of points with different cutoffs into whole arrays; points never put stay nan."""
 
-    def __init__(self, mixture: Mixture) -> None:
+    def __init__(self, mixture: Mixture, ansatz: str) -> None:
         size = mixture.shape[0]
         lengths = {"species": mixture.species, "species_": mixture.species, "direction": mixture.dim}
         self.fields = np.zeros((size, mixture.sublattices, mixture.species))
         self.outputs: dict[str, np.ndarray] = {}
         for name, variable in VARIABLES.items():
-            if name not in DRESSED_ONLY:
+            if name not in ABSENT[ansatz]:
                 shape = (size, *(lengths[d] for d in variable.dims))
                 fill = np.nan if variable.dtype == "float64" else 0
                 self.outputs[name] = np.full(shape, fill, variable.dtype)
@@ -125,7 +130,8 @@ class _Collector:
             demixing = (mixture.U12 > np.sqrt(mixture.U[:, 0] * mixture.U[:, 1])) & (mixture.n_max != 1)
             out["status"] = out["status"] | np.where(demixing, int(Status.DEMIXING), 0).astype(np.int32)
         out["status"] = np.where(gone, int(Status.COLLAPSE), out["status"]).astype(np.int32)
-        phase = label(out["order_parameter"], out["filling"], out["number_variance"])
+        # Where a superlattice makes the sublattices differ, their densities differ without any order.
+        phase = label(out if mixture.sublattices == 1 else out | {"staggering": np.zeros_like(out["staggering"])})
         phase = np.where((out["status"] & int(Status.FILLING_GAP)) > 0, np.int8(Phase.SEPARATED), phase)
         out["phase"] = np.where(gone, np.int8(Phase.COLLAPSE), phase)
         return out, self.fields

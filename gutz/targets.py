@@ -16,6 +16,7 @@ import jax.numpy as jnp
 import numpy as np
 
 from gutz.batch import LANES, Batch, solve_batch
+from gutz.dressed_batch import dress
 from gutz.model import Mixture
 from gutz.status import Status
 from gutz.variables import VARIABLES
@@ -51,9 +52,9 @@ def solve_given(mixture: Mixture, mu: Array, T: Array, *, n_max: int, sublattice
     return jax.tree.map(lambda v: v[:size], full)
 
 
-def solve_points(mixture: Mixture, *, n_max: int) -> tuple[Numbers, np.ndarray]:
+def solve_points(mixture: Mixture, *, n_max: int, ansatz: str) -> tuple[Numbers, np.ndarray]:
     """Solve a flat mixture of numbers, meeting its fillings and entropies. Returns outputs and fields."""
-    evaluate = _Evaluator(mixture, n_max)
+    evaluate = _Evaluator(mixture, n_max, ansatz)
     size = mixture.shape[0]
     if mixture.filling is not None:
         mu, T, remark = _meet_fillings(mixture, evaluate)
@@ -71,12 +72,13 @@ def solve_points(mixture: Mixture, *, n_max: int) -> tuple[Numbers, np.ndarray]:
 class _Evaluator:
     """Global solves of chosen points at trial values of mu and T, as numpy arrays, in padded batches."""
 
-    def __init__(self, mixture: Mixture, n_max: int) -> None:
+    def __init__(self, mixture: Mixture, n_max: int, ansatz: str) -> None:
         # Missing directions are directions without hopping: one compilation serves 1D, 2D and 3D.
         missing = [(0, 0), (0, 0), (0, 3 - mixture.dim)]
         self.mixture = mixture.replace(filling=None, entropy=None, mu=None, T=None, t=np.pad(mixture.t, missing), dim=3)
-        self.dim = mixture.dim
+        self.original = mixture
         self.n_max = n_max
+        self.ansatz = ansatz
         self.sublattices = mixture.sublattices
 
     def __call__(self, where: np.ndarray, mu: np.ndarray, T: np.ndarray) -> Batch:
@@ -96,8 +98,11 @@ class _Evaluator:
         batch = solve_batch(chosen, mu[index], T[index], n_max=self.n_max, sublattices=self.sublattices)
         batch = jax.tree.map(lambda v: np.asarray(v)[: piece.size], batch)
         for name in DIRECTED:
-            batch.outputs[name] = batch.outputs[name][..., : self.dim]
-        return batch
+            batch.outputs[name] = batch.outputs[name][..., : self.original.dim]
+        if self.ansatz == "product":
+            return batch
+        chosen = self.original[where[piece]]
+        return dress(chosen, mu[piece], T[piece], batch, n_max=self.n_max, sublattices=self.sublattices)
 
 
 def _energy_scale(mixture: Mixture) -> np.ndarray:

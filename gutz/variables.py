@@ -48,5 +48,5 @@ VARIABLES: dict[str, Variable] = {
     "residual": Variable((), "1", "Residual", "largest mismatch of the self-consistency conditions"),
 }  # fmt: skip
 
-DRESSED_ONLY = ("dressing",)
-"""Outputs that the product ansatz does not have."""
+ABSENT = {"product": ("dressing",), "dressed": ("residual",)}
+"""Outputs that an ansatz does not have."""

@@ -69,7 +69,7 @@ def test_attraction_beyond_collapse_is_fine_for_hard_cores():
 
 
 def test_unknown_ansatz_is_refused():
-    with pytest.raises(InputError, match="ansatz is 'best'; it must be one of: product"):
+    with pytest.raises(InputError, match="ansatz is 'best'; it must be one of: product, dressed"):
         gutz.solve(Mixture(t=0.1, U=1.0, mu=0.1), ansatz="best")
 
 

@@ -7,7 +7,8 @@ Out: F_bond = -1/2 ∫_0^β <V(τ) V(0)> dτ split by kind of process, its value
 
 With O running over (b_1, b_1†, b_2, b_2†) and C_AD(τ) = <O_A(τ) O_D†> the integrand is a sum of products of two
 C, so no array larger than (state, state, time) appears. Time runs over Gauss-Legendre nodes on a scale that is
-logarithmic from the inverse bandwidth to β/2; at T = 0 the integral over (0, ∞) is done in closed form, 1/(E_m + E_p - 2 E_0).
+logarithmic from the inverse bandwidth to β/2; at T = 0 the integral over (0, ∞) is done in closed form,
+1/(E_m + E_p - 2 E_0).
 Derivatives are divided differences of exp(-τh), without poles at degenerate levels (Daleckii and Krein).
 """
 
@@ -112,13 +113,18 @@ def eigensystem(h: Array, f: Frame) -> tuple[Array, Array]:
     starts = ends - np.array(f.blocks)
     energies: list[Array] = [jnp.zeros(0)] * len(f.blocks)
     strips: list[Array] = [jnp.zeros(0)] * len(f.blocks)
-    for size in set(f.blocks):
+    wait = jnp.zeros(h.shape[:-2])
+    for size in sorted(set(f.blocks)):
         which = [i for i, s in enumerate(f.blocks) if s == size]
         part = jnp.stack([h[..., starts[i] : ends[i], starts[i] : ends[i]] for i in which], axis=-3)
         if size == 1:
             energy, vectors = part[..., 0], jnp.ones_like(part)
         else:
+            # One after the other: eigensolver calls that run at the same time can block each other for ever in
+            # jax 0.10 on few cores (measured), so each waits for the one before through a number that is zero.
+            part = part + wait[..., None, None, None]
             energy, vectors = jnp.linalg.eigh(part, symmetrize_input=False)
+            wait = 0.0 * energy[..., 0, 0]
         for row, i in enumerate(which):
             pad = [(0, 0)] * (h.ndim - 1) + [(int(starts[i]), int(h.shape[-1] - ends[i]))]
             energies[i] = energy[..., row, :]

@@ -3,7 +3,7 @@
 In:  a flat `Mixture`, chemical potentials, temperatures and the `DressedMinimum` found there.
 Out: `DressedObservables`, numpy arrays over the points.
 
-First derivatives are taken by jax at fixed fields (envelope theorem: the fields are stationary). Second derivatives
+First derivatives are taken at fixed fields (envelope theorem: the fields are stationary). Second derivatives
 add the response of the fields, dx/dy = -H^-1 ∂²F/∂x∂y, from central differences of exact gradients. The stiffness
 has no such part: the functional is even in the twist at any fields.
 """
@@ -17,9 +17,9 @@ import numpy as np
 
 from gutz.ansatz import bond, dressed, families
 from gutz.ansatz.dressed import Sites
-from gutz.ansatz.families import Family
+from gutz.ansatz.families import Family, Plan
 from gutz.ansatz.selection import DressedMinimum
-from gutz.fock import LocalSpace, local_space
+from gutz.fock import local_space
 from gutz.model import Mixture
 
 Array = Any
@@ -43,80 +43,43 @@ class DressedObservables(NamedTuple):
     stiffness: Array
 
 
-class _Raw(NamedTuple):
-    """The parameters the functional is differentiated in."""
-
-    t: Array
-    U: Array
-    U12: Array
-    mu: Array
-    T: Array
-
-
-def _functional(
-    raw: _Raw, offset: Array, x: Array, lam: Array, space: LocalSpace, cold: bool, nodes: int
-) -> tuple[Array, Sites]:
-    names = dressed.NAMES[space.species]
-    mixture = Mixture.__new__(Mixture)
-    mixture._fill(
-        dict(t=raw.t, U=raw.U, U12=raw.U12, mu=raw.mu, filling=None, T=raw.T, entropy=None, offset=offset),
-        dim=raw.t.shape[-1],
-        species=space.species,
-        n_max=space.n_max,
-    )
-    p = dressed.sites(mixture, raw.mu, raw.T, space.n_max, x.shape[-2])
-    f = bond.frame(space.n_max, space.species, "full")
-    return dressed.free_energy(p, x, lam, f=f, names=names, cold=cold, nodes=nodes), p
-
-
-@partial(jax.jit, static_argnames=("n_max", "cold", "nodes", "active"))
-def _all(
-    raw: _Raw, offset: Array, x: Array, lam: Array, *, n_max: int, cold: bool, nodes: int, active: tuple[int, ...]
-) -> tuple[Array, _Raw, Array, Array, Array]:
-    """F, its derivatives in the parameters, the bond parts, phi, and second derivatives in (fields, mu, T)."""
-    space = local_space(n_max, raw.mu.shape[-1])
-    names = dressed.NAMES[space.species]
-    f = bond.frame(n_max, space.species, "full")
-
-    def total(raw: _Raw, x: Array) -> tuple[Array, Array]:
-        F, _ = _functional(raw, offset, x, lam, space, cold, nodes)
-        return F.sum(), F
-
-    gradient, F = jax.grad(total, has_aux=True)(raw, x)
-    p = _functional(raw, offset, x, lam, space, cold, nodes)[1]
-    at = dressed.look(p, x, lam, f=f, names=names, cold=cold, nodes=nodes)
-
-    def slopes(raw: _Raw, x: Array) -> Array:
-        """Derivatives in active fields of each sublattice, mu and T, in one row."""
-        (g, gx), _ = jax.grad(total, argnums=(0, 1), has_aux=True)(raw, x)
-        return jnp.concatenate([gx[..., active].reshape(x.shape[0], -1), g.mu, g.T[:, None]], -1)
-
-    # Steps small against T and against the level spacings that matter.
-    scale = jnp.max(raw.U, -1) + jnp.abs(raw.U12) + 2.0 * raw.t.sum((-1, -2))
-    step = 2e-4 * (scale if cold else jnp.minimum(scale, raw.T))
-
+@partial(jax.jit, static_argnames=("plan", "active"))
+def _responses(p: Sites, number: Array, x: Array, lam: Array, *, plan: Plan, active: tuple[int, ...]) -> Array:
+    """Second derivatives of F in (active fields of each sublattice, mu, T), shape (N, n, n)."""
+    f = bond.frame(plan.n_max, plan.species, "full")
     sublattices, k = x.shape[1:]
-    fields = np.zeros((sublattices * len(active), sublattices, k))
+    n, a = sublattices * len(active), plan.species
+
+    def slopes(energy: Array, T: Array, x: Array) -> Array:
+        at = dressed.look(
+            p._replace(energy=energy, T=T), x, lam, f=f, names=plan.names, cold=plan.cold, nodes=plan.nodes
+        )
+        in_mu = -jnp.einsum("...si,ai->...a", at.in_energy, number)
+        fields = at.gradient[..., jnp.asarray(active, int)].reshape(x.shape[0], -1)
+        return jnp.concatenate([fields, in_mu, at.in_T[:, None]], -1)
+
+    kick = np.zeros((n + a + 1, sublattices, k))
     for row, (site, i) in enumerate((site, i) for site in range(sublattices) for i in active):
-        fields[row, site, i] = 1.0
-    n, a = len(fields), space.species
-    dx = jnp.concatenate([jnp.asarray(fields), jnp.zeros((a + 1, sublattices, k))])
-    dmu = jnp.eye(n + a + 1)[:, n : n + a]
-    dT = (0.0 if cold else 1.0) * jnp.eye(n + a + 1)[:, -1]
+        kick[row, site, i] = 1.0
+    unit = np.eye(n + a + 1)
+    in_T = unit[:, -1] * (0.0 if plan.cold else 1.0)
+    # Small against T, or against the level spacings.
+    width = p.energy.max((-1, -2)) - p.energy.min((-1, -2)) + p.z_t.sum(-1)
+    step = 2e-4 * (0.1 * width if plan.cold else jnp.minimum(0.1 * width, p.T))
 
     def column(direction: tuple[Array, Array, Array]) -> Array:
         ex, emu, eT = direction
 
         def at_step(c: Array) -> Array:
             e = c * step
-            moved = raw._replace(mu=raw.mu + e[:, None] * emu, T=raw.T + e * eT)
-            return slopes(moved, x + e[:, None, None] * ex)
+            energy = p.energy - e[:, None, None] * (emu @ number)
+            return slopes(energy, p.T + e * eT, x + e[:, None, None] * ex)
 
         around = jax.lax.map(at_step, jnp.array([-2.0, -1.0, 1.0, 2.0]))
         return (around[0] - 8.0 * around[1] + 8.0 * around[2] - around[3]) / (12.0 * step[:, None])
 
-    second = jnp.moveaxis(jax.lax.map(column, (dx, dmu, dT)), 0, -1)
-    return F, gradient, at.parts, at.phi, second
+    columns = jax.lax.map(column, (jnp.asarray(kick), jnp.asarray(unit[:, n : n + a]), jnp.asarray(in_T)))
+    return jnp.moveaxis(columns, 0, -1)
 
 
 def observables(
@@ -162,24 +125,27 @@ def _chunk(
     if code == len(Family):
         used = tuple(n for n in used if n.startswith("J"))
     active = tuple(names.index(n) for n in used)
-    raw = _Raw(*(jnp.asarray(v) for v in (m.t, m.U, m.U12, mu[at], T[at])))
-    width = np.asarray(m.U).max(-1) * n_max**2 * species + np.abs(m.U12) * n_max**2
-    width = width + n_max * (np.abs(mu[at]).sum(-1) + 4 * np.asarray(m.t).sum((-1, -2)))
+    p = dressed.sites(m, jnp.asarray(mu[at]), jnp.asarray(T[at]), n_max, sublattices)
+    energy = np.asarray(p.energy)
+    width = energy.max((-1, -2)) - energy.min((-1, -2)) + 2 * n_max * np.asarray(p.z_t).sum(-1)
     nodes = 0 if cold else bond.enough_nodes(float((width / T[at]).max()))
+    plan = Plan("full", names, (1.0,), n_max, species, cold, nodes)
     x, lam = jnp.asarray(state.fields[at]), jnp.asarray(state.lam[at])
-    F, g, parts, phi, second = _all(
-        raw, jnp.asarray(m.offset), x, lam, n_max=n_max, cold=cold, nodes=nodes, active=active
-    )
-    F, parts, phi, second = (np.asarray(v) for v in (F, parts, phi, second))
-    filling, entropy = -np.asarray(g.mu), -np.asarray(g.T) * (not cold)
-    covariance = np.zeros((size, species, species))
-    for a in range(species):
-        covariance[:, a, a] = 2.0 * np.asarray(g.U)[:, a] + filling[:, a] - filling[:, a] ** 2
-    if species == 2:
-        covariance[:, 0, 1] = covariance[:, 1, 0] = np.asarray(g.U12) - filling[:, 0] * filling[:, 1]
-    reduced = _relaxed(second, len(active) * sublattices)
+    look = jax.tree_util.tree_map(np.asarray, jax.block_until_ready(families.survey(p, x, lam, plan=plan)))
+    number = local_space(n_max, species).number
+    second = np.asarray(_responses(p, jnp.asarray(number), x, lam, plan=plan, active=active))
+
+    F, entropy = look.free_energy, -look.in_T
+    # Derivatives in the energy of a basis state are corrected occupations; averages of number operators follow.
+    filling = np.einsum("nsi,ai->na", look.in_energy, number)
+    squares = np.einsum("nsi,ai,bi->nab", look.in_energy, number, number)
+    covariance = squares - filling[:, :, None] * filling[:, None, :]
     t = np.asarray(m.t)
-    stiffness = _stiffness(t, parts, (phi * phi[:, ::-1]).mean(1))
+    condensed = (look.phi * look.phi[:, ::-1]).mean(1)
+    hopping = np.einsum("nab,nbd->nad", look.parts.sum(1), t)
+    coherence = condensed[:, :, None] - np.asarray(lam)[:, None, None] * hopping
+    reduced = _relaxed(second, len(active) * sublattices)
+    stiffness = _stiffness(t, look.parts * np.asarray(lam)[:, None, None, None], condensed)
     return DressedObservables(
         F,
         entropy,
@@ -188,7 +154,7 @@ def _chunk(
         covariance,
         -reduced[:, :species, :species],
         -T[at] * reduced[:, -1, -1],
-        -0.5 * np.asarray(g.t),
+        coherence,
         stiffness,
     )
 

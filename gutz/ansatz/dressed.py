@@ -44,7 +44,8 @@ class Look(NamedTuple):
     """One evaluation. gradient, mean: (..., sublattice, field); response: d<Q_i>/dx_j, (..., sublattice, field, field).
 
     phi: (..., sublattice, species). bond, variance: value of the bond term and <V²>, summed over directions, (...).
-    parts: see `bond.Bond`.
+    parts: see `bond.Bond`. in_energy: derivative in the energy of each basis state, in the order of the Fock space,
+    (..., sublattice, state). in_T: derivative in the temperature at fixed fields, (...), 0 at T = 0.
     """
 
     free_energy: Array
@@ -55,6 +56,8 @@ class Look(NamedTuple):
     bond: Array
     variance: Array
     parts: Array
+    in_energy: Array
+    in_T: Array
 
 
 def sites(mixture: Mixture, mu: Array, T: Array, n_max: int, sublattices: int) -> Sites:
@@ -114,7 +117,28 @@ def look(p: Sites, x: Array, lam: Array, *, f: Frame, names: tuple[str, ...], co
         second.value / safe,
         second.variance / safe,
         second.parts,
+        *_in_parameters(lv, Q, x - molecular, second, p, f, cold=cold),
     )
+
+
+def _in_parameters(
+    lv: gibbs.Levels, Q: Array, mismatch: Array, second: bond.Bond, p: Sites, f: Frame, *, cold: bool
+) -> tuple[Array, Array]:
+    """Derivatives of F in the energies of the basis states, and in T, at fixed fields."""
+    sublattices = mismatch.shape[-2]
+    # d<Q>/dh = -K∘Q + <Q> P/T, summed with the mismatch of each field; the state itself is dF_tr/dh.
+    R = (mismatch[..., None, None] * Q).sum(-3)
+    occupied = lv.weight[..., :, None] * jnp.eye(R.shape[-1])
+    average = lv.inverse_temperature * jnp.einsum("...ii,...i->...", R, lv.weight)
+    shifted = (average[..., None, None] * occupied - gibbs.response_kernel(lv) * R) / sublattices + second.slope
+    in_h = occupied / sublattices + shifted
+    in_energy = ((lv.vectors @ in_h) * lv.vectors).sum(-1)[..., np.argsort(f.order)]
+    if cold:
+        return in_energy, jnp.zeros_like(second.value)
+    # Averages depend on h/T only, and the bond term is homogeneous of degree -1 in (h, T).
+    excitation = lv.energy - lv.energy.min(-1, keepdims=True)
+    along_h = (jnp.diagonal(shifted, axis1=-2, axis2=-1) * excitation).sum((-1, -2))
+    return in_energy, -lv.entropy.mean(-1) - (along_h + second.value) / p.T
 
 
 def _fields_in_levels(lv: gibbs.Levels, deviation: Array, phi: Array, f: Frame, names: tuple[str, ...]) -> Array:

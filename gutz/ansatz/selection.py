@@ -7,6 +7,7 @@ The rules of acceptance are those at the top of `gutz.ansatz.families`.
 
 from typing import Any, NamedTuple
 
+import jax
 import jax.numpy as jnp
 import numpy as np
 
@@ -21,6 +22,10 @@ Array = Any
 _COLDEST = 0.02
 """Below this fraction of the exchange energy the size of pair and density fields has no effect on the state: their
 minimum is found at this temperature, and evaluated at the one asked for."""
+
+_HOTTEST = 2.0
+"""Pair and anti-pair order is not looked for above this temperature, in units of n_max times the exchange energy: the
+mean-field transition is at the exchange energy for one atom per site and grows with the filling."""
 
 _PREFERENCE = 1e-13
 """Free energies closer than this, relative to 1 + |F|, are equal; the family first in `Family` is taken."""
@@ -111,9 +116,10 @@ class _Points:
 
         kinds = [Family.NORMAL] if self.species == 1 else [Family.NORMAL, Family.PAIR, Family.ANTIPAIR]
         for family in kinds:
-            fields, ok = self._without_singles(family)
-            look = self._survey(fields, np.ones(self.size))
-            stable = families.onset(self.sites, jnp.asarray(fields), jnp.ones(self.size), plan=self._full())
+            fields, ok, look = self._without_singles(family)
+            stable = jax.block_until_ready(
+                families.onset(self.sites, jnp.asarray(fields), jnp.ones(self.size), plan=self._full())
+            )
             soft = np.asarray(stable.dressed)
             ok = ok & (soft > 0)
             if family is Family.NORMAL:
@@ -176,7 +182,10 @@ class _Points:
         return Plan("full", self.names, (1.0,), self.n_max, self.species, self.cold, self.ordinary)
 
     def _survey(self, fields: np.ndarray, lam: np.ndarray) -> Look:
-        return families.survey(self.sites, jnp.asarray(fields), jnp.asarray(lam), plan=self._full())
+        # Waiting keeps eigensolver calls of different programs from running at the same time.
+        return jax.block_until_ready(
+            families.survey(self.sites, jnp.asarray(fields), jnp.asarray(lam), plan=self._full())
+        )
 
     def _product(self) -> np.ndarray:
         p = product.Sites(self.sites.energy, self.sites.z_t, self.sites.T)
@@ -199,12 +208,15 @@ class _Points:
         fields, ok = self._descend(Family.SINGLE, index, start[index], scale[index], self.sites, self.cold)
         return fields, ok
 
-    def _without_singles(self, family: Family) -> tuple[np.ndarray, np.ndarray]:
+    def _without_singles(self, family: Family) -> tuple[np.ndarray, np.ndarray, Look]:
         """Normal, pair and anti-pair families, from one uniform start and, on two sublattices, staggered ones."""
         names = families.names_of(family, self.species, self.sublattices)
         size = np.maximum(self.exchange, self.slow_T)
         sites = self.sites._replace(T=jnp.asarray(self.slow_T))
-        index = np.flatnonzero(self.slow_T > 0)
+        possible = self.slow_T > 0
+        if family is not Family.NORMAL:
+            possible &= self.slow_T < _HOTTEST * self.n_max * self.exchange
+        index = np.flatnonzero(possible)
         best, good = np.zeros((self.size, self.sublattices, len(self.names))), np.zeros(self.size, bool)
         if family is Family.NORMAL:
             good = self.slow_T == 0
@@ -220,12 +232,13 @@ class _Points:
                 start[..., 0] = size[:, None]
             scale = np.broadcast_to(size[:, None, None], start.shape)
             fields, ok = self._descend(family, index, start[index], scale[index], sites, False)
-            F = np.asarray(self._survey(fields, np.ones(self.size)).free_energy)
+            look = self._survey(fields, np.ones(self.size))
+            F = np.asarray(look.free_energy)
             ok &= np.isfinite(F)
             lower = ok & (F + 1e-12 * (1.0 + np.abs(F)) < lowest)
             best = np.where(lower[:, None, None], fields, best)
             lowest, good = np.where(lower, F, lowest), good | ok
-        return best, good
+        return best, good, look if len(patterns) == 1 else self._survey(best, np.ones(self.size))
 
     def _descend(
         self, family: Family, index: np.ndarray, start: np.ndarray, scale: np.ndarray, sites: Sites, cold: bool

@@ -14,16 +14,13 @@ from numpy.typing import NDArray
 from gutz import attributes
 from gutz.optics import Caution
 from gutz.scan.plan import Plan
-from gutz.variables import DRESSED_ONLY, ENERGY, VARIABLES
+from gutz.variables import ABSENT, ENERGY, VARIABLES
 
 VERSION = 1
 """Version of the layout of stored runs; it changes when an older `gutz` could misread a newer run."""
 
 NOT_COMPUTED = -1
 """Status of a point whose chunk has not been written."""
-
-ABSENT = {"product": DRESSED_ONLY}
-"""Outputs that an ansatz does not have."""
 
 
 class Field(NamedTuple):
@@ -90,7 +87,7 @@ def layout(plan: Plan) -> dict[str, Field]:
         found["cautions"] = Field((*grid,), "int32", attributes.of_flags(Caution, "Cautions about the lattice"))
     for name, variable in VARIABLES.items():
         found[name] = Field((*grid, *variable.dims), variable.dtype, attributes.of_output(name, unit))
-    for name in (*grid, *ABSENT.get(plan.spec.ansatz.kind, ())):
+    for name in (*grid, *ABSENT[plan.spec.ansatz.kind]):
         found.pop(name, None)
     status = found.pop("status")
     return {**found, "status": status}

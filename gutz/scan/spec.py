@@ -18,9 +18,9 @@ from gutz.errors import InputError
 from gutz.scan import fields, parameters
 from gutz.scan.document import Document
 from gutz.scan.fields import Beam, Energy, Per
-from gutz.variables import VARIABLES
+from gutz.variables import ABSENT, VARIABLES
 
-ANSAETZE = ("product",)
+ANSAETZE = tuple(ABSENT)
 MAX_AXES = 5
 MAX_AXIS_POINTS = 10_000_000
 MAX_POINTS = 100_000_000

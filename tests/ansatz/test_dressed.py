@@ -169,9 +169,12 @@ def test_first_derivatives_by_jax():
     f, names = bond.frame(N_MAX, 2, "full"), dressed.NAMES[2]
     at = dressed.look(p, x, jnp.ones(1), f=f, names=names, cold=False, nodes=24)
 
-    def F(x):
-        return dressed.free_energy(p, x, jnp.ones(1), f=f, names=names, cold=False, nodes=24).sum()
+    def F(x, energy, T):
+        q = p._replace(energy=energy, T=T)
+        return dressed.free_energy(q, x, jnp.ones(1), f=f, names=names, cold=False, nodes=24).sum()
 
-    value, gradient = jax.value_and_grad(F)(x)
+    value, (in_x, in_energy, in_T) = jax.value_and_grad(F, argnums=(0, 1, 2))(x, p.energy, p.T)
     assert value == pytest.approx(float(at.free_energy[0]), abs=1e-14)
-    assert np.asarray(gradient) == pytest.approx(np.asarray(at.gradient), abs=1e-12)
+    assert np.asarray(in_x) == pytest.approx(np.asarray(at.gradient), abs=1e-12)
+    assert np.asarray(in_energy) == pytest.approx(np.asarray(at.in_energy), abs=1e-12)
+    assert np.asarray(in_T) == pytest.approx(np.asarray(at.in_T), abs=1e-11)

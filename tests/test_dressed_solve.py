@@ -1,0 +1,71 @@
+"""The dressed ansatz through the public door: paired and counterflow phases, drag, couplings, what is refused."""
+
+import jax
+import numpy as np
+import pytest
+
+import gutz
+from gutz.errors import InputError
+from gutz.phases import Phase
+from gutz.status import Status
+
+
+@pytest.fixture(scope="module")
+def counterflow():
+    mix = gutz.Mixture(t=np.array([0.01, 0.02, 0.05]), U=1.0, U12=0.5, mu=0.25, T=0.0, dim=3, n_max=3)
+    return gutz.solve(mix, ansatz="dressed")
+
+
+@pytest.fixture(scope="module")
+def paired():
+    mix = gutz.Mixture(t=np.array([0.01, 0.02, 0.05]), U=1.0, U12=-0.5, mu=-0.25, T=0.0, dim=3, n_max=3)
+    return gutz.solve(mix, ansatz="dressed")
+
+
+def test_phases_follow_the_order(counterflow, paired):
+    assert list(counterflow.phase) == [Phase.COUNTERFLOW, Phase.COUNTERFLOW, Phase.SUPERFLUID]
+    assert list(paired.phase) == [Phase.PAIRED, Phase.PAIRED, Phase.SUPERFLUID]
+
+
+def test_counterflow_energy_is_that_of_the_exchange_model(counterflow):
+    """Second-order product value of the spin-1/2 model, -(z/2) 2t²(1/U12 + 1/U) - mu, up to fourth order in t.
+
+    Kuklov and Svistunov, PRL 90, 100401 (2003); Duan, Demler, Lukin, PRL 91, 090402 (2003).
+    """
+    expected = -3 * 2 * 0.01**2 * (1 / 0.5 + 1 / 1.0) - 0.25
+    assert abs(float(counterflow.free_energy[0]) - expected) < 1e-5
+    assert abs(float(counterflow.antipair_order[0]) - 0.5) < 1e-3
+
+
+def test_drag_tells_the_phases_apart(counterflow, paired):
+    """Rank one along (1, -1) in the counterflow, along (1, 1) in the paired superfluid; no hidden factor."""
+    for sol, sign in ((counterflow, -1.0), (paired, 1.0)):
+        rho = sol.stiffness[:2, :, :, 0]
+        np.testing.assert_allclose(rho[:, 0, 1], sign * rho[:, 0, 0], rtol=1e-6)
+        np.testing.assert_allclose(rho[:, 1, 1], rho[:, 0, 0], rtol=1e-6)
+        assert np.all(rho[:, 0, 0] > 0)
+        assert np.all(np.linalg.eigvalsh(sol.stiffness[2, :, :, 0]) > 0)
+
+
+def test_uncoupled_species_do_not_drag():
+    sol = gutz.solve(gutz.Mixture(t=0.05, U=1.0, U12=0.0, mu=0.3, T=0.0, dim=3, n_max=3), ansatz="dressed")
+    assert sol.phase == Phase.SUPERFLUID
+    assert abs(sol.stiffness[0, 1, 0]) < 1e-9
+
+
+def test_dressing_lowers_the_free_energy_of_the_product_state(counterflow):
+    product = gutz.solve(counterflow.mixture)
+    assert np.all(counterflow.free_energy < product.free_energy)
+    assert np.all((counterflow.status & int(Status.FALLBACK)) == 0)
+    assert np.all(counterflow.dressing < 0.2)
+
+
+def test_dataset_has_the_dressing_and_no_residual(counterflow):
+    ds = counterflow.to_dataset()
+    assert "dressing" in ds and "residual" not in ds
+    assert ds.attrs["ansatz"] == "dressed"
+
+
+def test_derivatives_through_the_dressed_state_are_refused():
+    with pytest.raises(InputError, match="only 'product' can be differentiated"):
+        jax.grad(lambda t: gutz.solve(gutz.Mixture(t=t, U=1.0, mu=0.3, n_max=3), "dressed").free_energy)(0.02)
