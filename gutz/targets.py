@@ -24,7 +24,7 @@ from gutz.variables import VARIABLES
 Array = Any
 Numbers = dict[str, np.ndarray]
 
-BATCH_SIZES = (8, LANES, 2048)
+BATCH_SIZES = (8, 2 * LANES, 16 * LANES)
 """Every call is padded to one of these, so that few shapes are ever compiled."""
 
 DIRECTED = tuple(name for name, variable in VARIABLES.items() if "direction" in variable.dims)

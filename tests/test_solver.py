@@ -88,7 +88,7 @@ def test_no_field_on_a_grid_gives_a_lower_free_energy(solved):
 
 
 def test_converged_is_true_when_looked_at_from_outside(solved):
-    """phi = x evaluated in numpy at the fields returned."""
+    """phi = x and the free energy, evaluated in numpy at the fields returned."""
     points, sol = solved
     b1, b2, *_ = plain_loop.PlainSite(N_MAX).operators
     fields = np.stack([b1 + b1.T, b2 + b2.T])
@@ -96,9 +96,11 @@ def test_converged_is_true_when_looked_at_from_outside(solved):
     for i in np.flatnonzero((sol.status & int(Status.NOT_CONVERGED | Status.DEGENERATE)) == 0):
         x = sol.fields[i, 0]
         E, V = np.linalg.eigh(np.diag(energy[i]) - np.einsum("a,aij->ij", Z * points["t"][i] * x, fields))
-        weight, _ = plain_loop._thermal(E, float(points["T"][i]))
+        weight, trial = plain_loop._thermal(E, float(points["T"][i]))
         phi = np.array([0.5 * ((V * (f @ V)).sum(0) @ weight) for f in fields])
         assert np.abs(np.abs(phi) - x).max() < 2e-10
+        F = trial + (Z * points["t"][i] * (2 * x * np.abs(phi) - phi**2)).sum()
+        assert abs(F - sol.free_energy[i]) < 1e-12 * (1 + abs(F))
 
 
 def test_transition_at_finite_temperature_can_be_first_order():

@@ -214,7 +214,7 @@ matrices = st.integers(0, 2**32 - 1).map(lambda s: symmetric(np.random.default_r
 temperatures = st.floats(1e-3, 1e2)
 
 
-@settings(max_examples=200)
+@settings(max_examples=500)
 @given(matrices, temperatures, st.floats(-10, 10), st.floats(0.01, 100))
 def test_shift_and_scale_of_energies(h, T, shift, scale):
     F = float(FREE_ENERGY(h, T))
@@ -225,7 +225,7 @@ def test_shift_and_scale_of_energies(h, T, shift, scale):
     assert abs(scaled - scale * F) < 1e-13 * scale * size
 
 
-@settings(max_examples=200)
+@settings(max_examples=500)
 @given(matrices, temperatures, st.integers(0, 2**32 - 1))
 def test_rotation_changes_nothing_and_heat_capacity_is_a_fluctuation(h, T, seed):
     q = np.linalg.qr(np.random.default_rng(seed).normal(size=(5, 5)))[0]
