@@ -44,7 +44,8 @@ class Frame:
 
     kind: "full" (any field), "pair" (n1 - n2 conserved), "antipair" (n1 + n2 conserved), "normal" (diagonal).
     order: position in the Fock space of each basis state. blocks: sizes, in order. lower, number: as in `LocalSpace`,
-    in this order. fields: what each trial field couples to, by name, (state, state).
+    in this order. fields: what each trial field couples to, by name, (state, state);
+    "charge" and "spin" are nu_1 + nu_2 and nu_1 - nu_2.
     combos: pairs (A, D) of rows of (b_1, b_1†, b_2, b_2†) whose correlation does not vanish, A ≤ D.
     partner: position in combos of (A†, D†). slot: (0 anomalous or 1 normal, species, species) of each combo.
     """
@@ -88,6 +89,7 @@ def frame(n_max: int, species: int, kind: str) -> Frame:
         fields["M"] = (space.antipair + space.antipair.T)[pick]
     for a in range(species):
         fields[f"nu{a + 1}"] = np.diag(number[a])
+    fields["charge"], fields["spin"] = np.diag(number.sum(0)), np.diag(number[0] - number[-1])
     # b lowers and b† raises the block by `charge`; only operators of equal charge (and order) correlate.
     charge = [(1, -1, 1, -1), (1, -1, -1, 1)][kind == "pair"]
     combos = []

@@ -25,6 +25,9 @@ from gutz.model import Mixture
 Array = Any
 
 
+_SPIN = len(Family) + 1
+
+
 class DressedObservables(NamedTuple):
     """Per site, for N points. free_energy, entropy, energy, heat_capacity: (N,). filling: (N, species).
 
@@ -43,24 +46,21 @@ class DressedObservables(NamedTuple):
     stiffness: Array
 
 
-@partial(jax.jit, static_argnames=("plan", "active"))
-def _responses(p: Sites, number: Array, x: Array, lam: Array, *, plan: Plan, active: tuple[int, ...]) -> Array:
-    """Second derivatives of F in (active fields of each sublattice, mu, T), shape (N, n, n)."""
+@partial(jax.jit, static_argnames=("plan",))
+def _responses(p: Sites, number: Array, x: Array, lam: Array, along: Array, *, plan: Plan) -> Array:
+    """Second derivatives of F in (directions `along` of the fields, mu, T); along: (n, sublattice, field)."""
     f = bond.frame(plan.n_max, plan.species, "full")
-    sublattices, k = x.shape[1:]
-    n, a = sublattices * len(active), plan.species
+    n, a = along.shape[0], plan.species
 
     def slopes(energy: Array, T: Array, x: Array) -> Array:
         at = dressed.look(
             p._replace(energy=energy, T=T), x, lam, f=f, names=plan.names, cold=plan.cold, nodes=plan.nodes
         )
         in_mu = -jnp.einsum("...si,ai->...a", at.in_energy, number)
-        fields = at.gradient[..., jnp.asarray(active, int)].reshape(x.shape[0], -1)
+        fields = jnp.einsum("...sk,nsk->...n", at.gradient, along)
         return jnp.concatenate([fields, in_mu, at.in_T[:, None]], -1)
 
-    kick = np.zeros((n + a + 1, sublattices, k))
-    for row, (site, i) in enumerate((site, i) for site in range(sublattices) for i in active):
-        kick[row, site, i] = 1.0
+    kick = jnp.concatenate([along, jnp.zeros((a + 1, *along.shape[1:]))])
     unit = np.eye(n + a + 1)
     in_T = unit[:, -1] * (0.0 if plan.cold else 1.0)
     # Small against T, or against the level spacings.
@@ -78,7 +78,7 @@ def _responses(p: Sites, number: Array, x: Array, lam: Array, *, plan: Plan, act
         around = jax.lax.map(at_step, jnp.array([-2.0, -1.0, 1.0, 2.0]))
         return (around[0] - 8.0 * around[1] + 8.0 * around[2] - around[3]) / (12.0 * step[:, None])
 
-    columns = jax.lax.map(column, (jnp.asarray(kick), jnp.asarray(unit[:, n : n + a]), jnp.asarray(in_T)))
+    columns = jax.lax.map(column, (kick, jnp.asarray(unit[:, n : n + a]), jnp.asarray(in_T)))
     return jnp.moveaxis(columns, 0, -1)
 
 
@@ -94,6 +94,11 @@ def observables(
     N = T.size
     out = DressedObservables(*(np.zeros((N, *s)) for s in _shapes(species, dim)))
     family = np.where(state.lam > 0, state.family, len(Family))
+    if species == 2 and sublattices == 2:
+        # Normal states carry total or difference fields (`families.variants`): a code of its own for the latter.
+        nu = state.fields[..., -2:]
+        spin = np.abs(nu[..., 0] - nu[..., 1]).max(-1) > np.abs(nu.sum(-1)).max(-1)
+        family = np.where((family == Family.NORMAL) & spin, _SPIN, family)
     for cold in (False, True):
         for code in np.unique(family):
             group = np.flatnonzero(((T == 0) == cold) & (family == code))
@@ -120,11 +125,12 @@ def _chunk(
     species = m.species
     names = dressed.NAMES[species]
     sublattices = state.fields.shape[1]
-    family = Family.SINGLE if code == len(Family) else Family(code)
-    used = families.names_of(family, species, sublattices)
-    if code == len(Family):
-        used = tuple(n for n in used if n.startswith("J"))
-    active = tuple(names.index(n) for n in used)
+    family = Family.SINGLE if code == len(Family) else Family(code % _SPIN)
+    used = families.variants(family, species, sublattices)[1 if code == _SPIN else 0]
+    along = np.zeros((sublattices, len(used), sublattices, len(names)))
+    for site in range(sublattices):
+        along[site, :, site] = [families.spread(name, species) for name in used]
+    along = along.reshape(-1, sublattices, len(names))
     p = dressed.sites(m, jnp.asarray(mu[at]), jnp.asarray(T[at]), n_max, sublattices)
     energy = np.asarray(p.energy)
     width = energy.max((-1, -2)) - energy.min((-1, -2)) + 2 * n_max * np.asarray(p.z_t).sum(-1)
@@ -133,7 +139,7 @@ def _chunk(
     x, lam = jnp.asarray(state.fields[at]), jnp.asarray(state.lam[at])
     look = jax.tree_util.tree_map(np.asarray, jax.block_until_ready(families.survey(p, x, lam, plan=plan)))
     number = local_space(n_max, species).number
-    second = np.asarray(_responses(p, jnp.asarray(number), x, lam, plan=plan, active=active))
+    second = np.asarray(_responses(p, jnp.asarray(number), x, lam, jnp.asarray(along), plan=plan))
 
     F, entropy = look.free_energy, -look.in_T
     # Derivatives in the energy of a basis state are corrected occupations; averages of number operators follow.
@@ -144,7 +150,7 @@ def _chunk(
     condensed = (look.phi * look.phi[:, ::-1]).mean(1)
     hopping = np.einsum("nab,nbd->nad", look.parts.sum(1), t)
     coherence = condensed[:, :, None] - np.asarray(lam)[:, None, None] * hopping
-    reduced = _relaxed(second, len(active) * sublattices)
+    reduced = _relaxed(second, len(along))
     stiffness = _stiffness(t, look.parts * np.asarray(lam)[:, None, None, None], condensed)
     return DressedObservables(
         F,

@@ -96,13 +96,35 @@ class _Lanes(NamedTuple):
     steps: Array
 
 
-def names_of(family: Family, species: int, sublattices: int) -> tuple[str, ...]:
-    """Trial fields of a family, in the order of `dressed.NAMES`."""
-    densities = ("nu1", "nu2")[:species]
+def variants(family: Family, species: int, sublattices: int) -> tuple[tuple[str, ...], ...]:
+    """Sets of trial fields to try for a family; names as in `bond.Frame.fields`.
+
+    On two sublattices density fields come as total or difference, one of them at a time: a staggered field on a number
+    that does not fluctuate costs nothing at low T, closes a gap, and would run away.
+    """
+    singles, densities = ("J1", "J2")[:species], ("nu1", "nu2")[:species]
     if family is Family.SINGLE:
-        singles = ("J1", "J2")[:species]
-        return singles if sublattices == 1 else singles + densities
-    return {Family.NORMAL: (), Family.PAIR: ("K",), Family.ANTIPAIR: ("M",)}[family] + densities
+        return (singles,)
+    order = {Family.NORMAL: (), Family.PAIR: ("K",), Family.ANTIPAIR: ("M",)}[family]
+    if sublattices == 1:
+        return ((*order, *densities),)
+    fits = {Family.PAIR: ("charge",), Family.ANTIPAIR: ("spin",)}
+    return tuple((*order, name) for name in fits.get(family, ("charge", "spin")[:species]))
+
+
+def spread(name: str, species: int) -> np.ndarray:
+    """A trial field as a vector in the fields of `dressed.NAMES`."""
+    out = np.zeros(len(dressed.NAMES[species]))
+    if name in ("charge", "spin"):
+        out[-species:] = (1.0, -1.0 if name == "spin" else 1.0)[:species]
+    else:
+        out[dressed.NAMES[species].index(name)] = 1.0
+    return out
+
+
+def makes_order(name: str) -> bool:
+    """The field breaks a symmetry, so that its sign is a choice of phase and zero stays zero."""
+    return name[0] in "JKM"
 
 
 @partial(jax.jit, static_argnames=("plan", "lanes"))
@@ -117,7 +139,7 @@ def descend(p: Sites, point: Array, start: Array, scale: Array, count: Array, *,
     jobs, sublattices, k = start.shape
     n = sublattices * k
     stages = jnp.asarray(plan.stages)
-    may_start = np.tile([not name.startswith("nu") for name in plan.names], sublattices)
+    may_start = np.tile([makes_order(name) for name in plan.names], sublattices)
 
     def load(job: Array) -> tuple[Sites, Array, Array]:
         safe = jnp.minimum(job, jobs - 1)

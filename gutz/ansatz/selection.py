@@ -152,8 +152,9 @@ class _Points:
         lam = np.where(fallback, 0.0, 1.0)
         look = self._survey(chosen, lam)
         phi = np.asarray(look.phi)
-        # Minus the derivative in a source of Q: the trial average, corrected where the family left this field out.
-        mean = np.asarray(look.mean) - self.sublattices * np.asarray(look.gradient)
+        # Minus the derivative in a uniform source of Q: the trial average, corrected where the family left this field
+        # out. (A staggered source on a number that does not fluctuate has no meaning, see `families.variants`.)
+        mean = np.asarray(look.mean) - np.asarray(look.gradient).sum(1, keepdims=True)
         dressing = _dressing(look)
         has_order = np.abs(phi).max((-1, -2)) > families.ORDER_FLOOR
         family_code = np.where(fallback, np.where(has_order, Family.SINGLE, Family.NORMAL), order)
@@ -199,18 +200,14 @@ class _Points:
     def _single(self, x: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Follow the product minimum to λ = 1; where that has no order the family is empty."""
         J = self.z_t[:, None, :] * x[:, ::-1, :]
-        names = families.names_of(Family.SINGLE, self.species, self.sublattices)
-        start = np.zeros((self.size, self.sublattices, len(names)))
-        start[..., : self.species] = J
-        scale = np.empty_like(start)
+        names = families.variants(Family.SINGLE, self.species, self.sublattices)[0]
+        scale = np.empty_like(J)
         scale[:] = 0.1 * np.maximum(self.z_t.max(-1), 1e-12)[:, None, None]
         index = np.flatnonzero(np.abs(x).max((-1, -2)) > 0)
-        fields, ok = self._descend(Family.SINGLE, index, start[index], scale[index], self.sites, self.cold)
-        return fields, ok
+        return self._descend(Family.SINGLE, names, index, J[index], scale[index], self.sites, self.cold)
 
     def _without_singles(self, family: Family) -> tuple[np.ndarray, np.ndarray, Look]:
         """Normal, pair and anti-pair families, from one uniform start and, on two sublattices, staggered ones."""
-        names = families.names_of(family, self.species, self.sublattices)
         size = np.maximum(self.exchange, self.slow_T)
         sites = self.sites._replace(T=jnp.asarray(self.slow_T))
         possible = self.slow_T > 0
@@ -221,34 +218,42 @@ class _Points:
         if family is Family.NORMAL:
             good = self.slow_T == 0
         lowest = np.full(self.size, np.inf)
-        patterns = [np.zeros((self.sublattices, self.species))]
-        if self.sublattices == 2:
-            signs = [(1.0, 1.0), (1.0, -1.0)] if self.species == 2 else [(1.0,)]
-            patterns += [0.5 * np.outer([1.0, -1.0], s) for s in signs]
-        for pattern in patterns:
+        starts = [
+            (names, tilt)
+            for names in families.variants(family, self.species, self.sublattices)
+            for tilt in ((0.0,) if self.sublattices == 1 else (0.0, 0.5))
+        ]
+        for names, tilt in starts:
             start = np.zeros((self.size, self.sublattices, len(names)))
-            start[..., -self.species :] = size[:, None, None] * pattern
             if family is not Family.NORMAL:
                 start[..., 0] = size[:, None]
+            if tilt > 0:
+                start[..., -1] = tilt * size[:, None] * np.array([1.0, -1.0])
             scale = np.broadcast_to(size[:, None, None], start.shape)
-            fields, ok = self._descend(family, index, start[index], scale[index], sites, False)
+            fields, ok = self._descend(family, names, index, start[index], scale[index], sites, False)
             look = self._survey(fields, np.ones(self.size))
             F = np.asarray(look.free_energy)
             ok &= np.isfinite(F)
             lower = ok & (F + 1e-12 * (1.0 + np.abs(F)) < lowest)
             best = np.where(lower[:, None, None], fields, best)
             lowest, good = np.where(lower, F, lowest), good | ok
-        return best, good, look if len(patterns) == 1 else self._survey(best, np.ones(self.size))
+        return best, good, look if len(starts) == 1 else self._survey(best, np.ones(self.size))
 
     def _descend(
-        self, family: Family, index: np.ndarray, start: np.ndarray, scale: np.ndarray, sites: Sites, cold: bool
+        self,
+        family: Family,
+        names: tuple[str, ...],
+        index: np.ndarray,
+        start: np.ndarray,
+        scale: np.ndarray,
+        sites: Sites,
+        cold: bool,
     ) -> tuple[np.ndarray, np.ndarray]:
         """Run the jobs; returns fields of all points in the order of `dressed.NAMES`, and where they converged."""
         fields = np.zeros((self.size, self.sublattices, len(self.names)))
         ok = np.zeros(self.size, bool)
         if index.size == 0:
             return fields, ok
-        names = families.names_of(family, self.species, self.sublattices)
         nodes = _plan_nodes(self.width, np.asarray(sites.T)) if not cold else 0
         plan = Plan(
             families.KIND[family],
@@ -273,10 +278,10 @@ class _Points:
         # The functional is even in every order-making field; the sign is a choice of phase.
         for i, name in enumerate(names):
             column = x[..., i]
-            if not name.startswith("nu"):
+            if families.makes_order(name):
                 overall = np.where(column[np.arange(index.size), np.abs(column).argmax(-1)] < 0, -1.0, 1.0)
                 column = column * overall[:, None]
-            fields[index, :, self.names.index(name)] = column
+            fields[index] += column[..., None] * families.spread(name, self.species)
         ok[index] = np.asarray(found.converged)[: index.size]
         return fields, ok
 

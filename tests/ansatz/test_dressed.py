@@ -14,6 +14,8 @@ from gutz.ansatz.families import DRESSING_LARGE, Family
 from gutz.model import Mixture
 from gutz.status import Status
 
+pytestmark = pytest.mark.slow  # compiling, not computing
+
 N_MAX = 2
 COLD_T = 1e-4
 
@@ -126,6 +128,26 @@ def test_hard_core_duality():
     assert state.free_energy[0] == pytest.approx(state.free_energy[1] - mu[1], abs=1e-10)
     assert state.antipair[0] == pytest.approx(state.pair[1], abs=1e-8)
     assert state.dressing[0] == pytest.approx(state.dressing[1], abs=1e-10)
+
+
+def test_staggered_order_on_two_sublattices():
+    """Hard cores, half filling each. z-Néel: F = -mu - (z/2)(t1² + t2²)/U12, up to fourth order in the hopping (exact
+    levels of two sites); checkerboard of pairs by duality; for equal species Néel equals counterflow (SU(2))."""
+    t1, t2 = np.array([0.03, 0.02, 0.03]), np.array([0.004, 0.02, 0.004])
+    U12 = np.array([1.0, 0.5, -1.0])
+    mixture = Mixture(t=(t1, t2), U=1.0, U12=U12, mu=0.5 * U12, T=1e-4, n_max=1)
+    two, one = solve(mixture, 1, 2), solve(mixture, 1, 1)
+    exchange = 3 * (t1**2 + t2**2) / np.abs(U12)
+    error = two.free_energy - (-exchange - np.where(U12 > 0, 0.5 * U12, 0.0))
+    assert (np.abs(error) < exchange**2 / np.abs(U12)).all()
+    assert (two.family == Family.NORMAL).all()
+    staggering = 0.5 * (two.filling[:, 0] - two.filling[:, 1])
+    assert np.abs(staggering) == pytest.approx(0.5, abs=1e-3)
+    assert (staggering[:2].prod(-1) < 0).all()
+    assert staggering[2].prod() > 0
+    assert one.family.tolist() == [Family.ANTIPAIR, Family.ANTIPAIR, Family.PAIR]
+    assert (one.free_energy[[0, 2]] > two.free_energy[[0, 2]]).all()
+    assert one.free_energy[1] == pytest.approx(two.free_energy[1], abs=1e-9)
 
 
 def test_deep_superfluid_is_the_coherent_state():

@@ -7,6 +7,8 @@ import pytest
 from gutz.ansatz import bond, dressed, families
 from gutz.model import Mixture
 
+pytestmark = pytest.mark.slow  # compiling, not computing
+
 
 def at_normal(mixture, n_max, nodes):
     """Curvature in J and filling of the normal state (no trial field at all)."""
