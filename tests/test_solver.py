@@ -8,6 +8,8 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 import gutz
 from gutz.ansatz import descent
@@ -141,6 +143,27 @@ def test_free_energy_is_an_upper_bound_of_the_exact_one(T):
         gaps += [float(sol.free_energy[i]) - exact(model) for sol, model in cases]
     assert min(gaps) > -1e-12
     assert max(gaps) > 1e-3  # the comparison is not of a thing with itself
+
+
+@settings(max_examples=60)
+@given(
+    t=st.tuples(st.floats(0.0, 0.5), st.floats(0.0, 0.5)),
+    U12=st.floats(-1.5, 3.0),
+    mu=st.tuples(st.floats(-1.0, 2.0), st.floats(-1.0, 2.0)),
+    T=st.floats(0.0, 1.0),
+)
+def test_bound_and_first_derivatives_for_any_hard_core_mixture(t, U12, mu, T):
+    """F is above exact diagonalisation of a ring, and the filling is its slope."""
+    h = 1e-4
+    first = mu[0] + np.array([0, h, -h])
+    sol = gutz.solve(gutz.Mixture(t=t, U=1.0, U12=U12, mu=(first, mu[1]), T=T, dim=1, n_max=1))
+    model = LatticeModel(ring(3), t=t, U=(1.0, 1.0), U12=U12, mu=mu, n_max=1)
+    state = ed.ground_state(model) if T == 0 else ed.thermal(model, T)
+    assert float(sol.free_energy[0]) >= state.free_energy / 3 - 1e-12
+    # F is concave in mu, so the difference quotient lies between the fillings at the ends.
+    quotient = -(sol.free_energy[1] - sol.free_energy[2]) / (2 * h)
+    n = sol.filling[:, 0]
+    assert n[2] - 1e-8 <= quotient <= n[1] + 1e-8
 
 
 def test_outputs_are_the_derivatives_they_claim_to_be(solved):

@@ -50,7 +50,7 @@ MESSAGES = [
     ),
     (MIXTURE, ["mixture.U=[1]"], "mixture.U: has 1 entries; it must have 2, one per species"),
     (MIXTURE, ["mixture.species=1"], "= mixture.U12 (near line 4): must be left out, because there is one species"),
-    (MIXTURE, ["ansatz.kind=produkt"], 'ansatz.kind: "produkt" is not allowed; it must be "product"'),
+    (MIXTURE, ["ansatz.kind=produkt"], 'ansatz.kind: "produkt" is not allowed; it must be "product" or "dressed"'),
     (MIXTURE, ['output.figures=["fase"]'], 'output.figures: holds "fase", which is not known; did you mean "phase"?'),
     (MIXTURE, ["trap.frequency=20"], "= trap: unknown section; allowed are mixture, lattice, ansatz, axes, output"),
     (MIXTURE, ["axis.mu=3"], '= axis: unknown section; did you mean "axes"?'),
