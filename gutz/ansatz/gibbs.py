@@ -38,19 +38,33 @@ class Levels(NamedTuple):
     inverse_temperature: Array
 
 
-def levels(h: Array, T: Array) -> Levels:
-    """Eigensystem, Boltzmann weights, free energy and entropy; for values only, not to be differentiated."""
-    lv = block_levels(h[..., None, :, :], T)
+def levels(h: Array, T: Array, *, one_by_one: bool = False) -> Levels:
+    """Eigensystem, Boltzmann weights, free energy and entropy; for values only, not to be differentiated.
+
+    one_by_one: solve the matrices of a batch in turn. A compiled program with several independent batched
+    eigenproblems can lock up for ever, since each waits for the threads the others hold (jax 0.10 on CPU); programs
+    made by differentiation contain many.
+    """
+    lv = block_levels(h[..., None, :, :], T, one_by_one=one_by_one)
     return lv._replace(energy=lv.energy[..., 0, :], vectors=lv.vectors[..., 0, :, :], weight=lv.weight[..., 0, :])
 
 
-def block_levels(h: Array, T: Array) -> Levels:
+def _eigh(h: Array, one_by_one: bool) -> tuple[Array, Array]:
+    if not one_by_one:
+        energy, vectors = jnp.linalg.eigh(h, symmetrize_input=False)[:2]
+        return energy, vectors
+    flat = h.reshape((-1, *h.shape[-2:]))
+    energy, vectors = jax.lax.map(lambda m: tuple(jnp.linalg.eigh(m, symmetrize_input=False)), flat)
+    return energy.reshape(h.shape[:-1]), vectors.reshape(h.shape)
+
+
+def block_levels(h: Array, T: Array, *, one_by_one: bool = False) -> Levels:
     """As `levels`, for block-diagonal matrices given as (..., block, state, state), sharing one T per site.
 
     energy, weight: (..., block, level); the weights of all blocks together sum to 1.
     """
     T = jnp.asarray(T)
-    energy, vectors = jnp.linalg.eigh(h, symmetrize_input=False)[:2]
+    energy, vectors = _eigh(h, one_by_one)
     warm = T > 0
     beta = jnp.where(warm, 1.0 / jnp.where(warm, T, 1.0), 0.0)
     lowest = energy[..., 0].min(-1)
@@ -111,7 +125,7 @@ def _effective_change(h: Array, T: Array, dh: Array, dT: Array) -> Array:
 @jax.custom_jvp
 def free_energy(h: Array, T: Array) -> Array:
     """F = -T log tr exp(-h/T), at T = 0 the lowest eigenvalue; shape (...)."""
-    return levels(h, T).free_energy
+    return levels(h, T, one_by_one=True).free_energy
 
 
 @free_energy.defjvp
@@ -124,7 +138,7 @@ def _free_energy_jvp(primals: Any, tangents: Any) -> Any:
 @jax.custom_jvp
 def entropy(h: Array, T: Array) -> Array:
     """S = -dF/dT in k_B, 0 at T = 0 (also for a degenerate ground state); shape (...)."""
-    return levels(h, T).entropy
+    return levels(h, T, one_by_one=True).entropy
 
 
 @entropy.defjvp
@@ -172,19 +186,19 @@ def state_change(h: Array, T: Array, A: Array) -> Array:
 
 
 def _state(h: Array, T: Array) -> Array:
-    lv = levels(h, T)
+    lv = levels(h, T, one_by_one=True)
     return _from_levels(lv, _diagonal_matrix(lv.weight))
 
 
 def _first(h: Array, T: Array, A: Array) -> Array:
-    lv = levels(h, T)
+    lv = levels(h, T, one_by_one=True)
     inner = -response_kernel(lv) * _to_levels(lv, A)
     return _from_levels(lv, inner - _diagonal_matrix(lv.weight * _trace(inner)[..., None]))
 
 
 def _second(h: Array, T: Array, A: Array, B: Array) -> Array:
     """Second-order change of the state, bilinear and symmetric in A and B."""
-    lv = levels(h, T)
+    lv = levels(h, T, one_by_one=True)
     kernel = -response_kernel(lv)
     a, b = _to_levels(lv, A), _to_levels(lv, B)
     first_a, first_b = kernel * a, kernel * b

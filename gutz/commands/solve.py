@@ -14,9 +14,9 @@ from gutz import console
 from gutz.commands.points import load, values
 from gutz.phases import WORDS, Phase
 from gutz.scan import schema
+from gutz.scan.chunk import compute_chunk
 from gutz.scan.plan import Plan, check_physics
 from gutz.scan.plan import at as choose
-from gutz.scan.runner import compute_chunk
 from gutz.status import UNTRUSTED, describe
 
 

@@ -24,10 +24,10 @@ import zarr
 from filelock import FileLock, Timeout
 
 from gutz.errors import InputError, OutputError, ResourceError
-from gutz.model import Mixture
 from gutz.scan import document, paths, schema, spec, store
+from gutz.scan.chunk import compute_chunk
 from gutz.scan.plan import Plan, check_physics, plan
-from gutz.solver import TOLERANCES, solve
+from gutz.solver import TOLERANCES
 from gutz.status import UNTRUSTED, Status
 
 LOCK = ".lock"
@@ -122,23 +122,6 @@ def run(
         else:
             target = store.Store.create(folder, full, source, TOLERANCES)
         return _work(folder, full, target, progress, notice, executor or Here(), in_flight)
-
-
-def compute_chunk(full: Plan, index: Sequence[int]) -> dict[str, Any]:
-    """Solve one chunk; arrays of the full chunk shape for every variable of the run."""
-    picked = full.picked(index)
-    found = full.lattice(picked)
-    settings = full.settings(picked, found)
-    U12 = np.asarray(settings["U12"])
-    # The model refuses a mixture that collapses at every point; here that may be true of one chunk of many.
-    mixture = Mixture(**{**settings, "U12": np.zeros(U12.shape)})
-    mixture = mixture.replace(U12=np.broadcast_to(U12, mixture.shape))
-    values: dict[str, Any] = {"t": mixture.t, "U": mixture.U, "U12": mixture.U12}
-    if found is not None:
-        values["cautions"] = np.broadcast_to(found.flags, mixture.shape)
-    names = [name for name in schema.layout(full) if name not in values]
-    solution = solve(mixture, ansatz=full.spec.ansatz.kind)
-    return values | {name: np.asarray(getattr(solution, name)) for name in names}
 
 
 def _work(

@@ -59,9 +59,9 @@ points = 4
 @pytest.fixture
 def quick(monkeypatch):
     """Scans with the stand-in solver."""
-    from gutz.scan import runner
+    from gutz.scan import chunk, runner
 
-    monkeypatch.setattr(runner, "solve", standin.solve)
+    monkeypatch.setattr(chunk, "solve", standin.solve)
     return runner
 
 

@@ -9,7 +9,7 @@ from filelock import FileLock
 from test_store import same_bytes
 
 from gutz.errors import InputError, OutputError, ResourceError
-from gutz.scan import open_run
+from gutz.scan import chunk, open_run
 from gutz.status import UNTRUSTED, Status
 
 
@@ -139,7 +139,7 @@ def test_a_scan_needs_axes(quick, mixture_file, tmp_path):
 
 
 def test_a_crash_of_the_solver_loses_no_finished_chunk(quick, mixture_file, tmp_path, monkeypatch):
-    real, count = quick.solve, [0]
+    real, count = chunk.solve, [0]
 
     def crashing(mixture, ansatz):
         count[0] += 1
@@ -147,7 +147,7 @@ def test_a_crash_of_the_solver_loses_no_finished_chunk(quick, mixture_file, tmp_
             raise ZeroDivisionError
         return real(mixture, ansatz)
 
-    monkeypatch.setattr(quick, "solve", crashing)
+    monkeypatch.setattr(chunk, "solve", crashing)
     with pytest.raises(ZeroDivisionError):
         quick.run(mixture_file, tmp_path / "out")
     assert open_run(tmp_path / "out").status.values.max() >= 0

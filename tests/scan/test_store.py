@@ -201,8 +201,8 @@ DRIVER = """
 import sys
 sys.path.insert(0, {here!r})
 import standin
-from gutz.scan import runner
-runner.solve = standin.solve
+from gutz.scan import chunk, runner
+chunk.solve = standin.solve
 outcome = runner.run(sys.argv[1], sys.argv[2], resume=True)
 sys.exit(outcome.exit_code)
 """
