@@ -9,6 +9,7 @@ from typing import Any, NamedTuple
 
 import jax
 import jax.numpy as jnp
+import numpy as np
 
 from gutz.ansatz import descent, gibbs, product
 from gutz.ansatz.product import Sites
@@ -83,15 +84,14 @@ def global_minimum(mixture: Mixture, mu: Array, T: Array, *, n_max: int, sublatt
     p, start = _prepare(mixture, mu, T, n_max=n_max, sublattices=sublattices)
     size, species = start.shape[0], start.shape[-1]
     work = {"n_max": n_max, "lanes": min(size, LANES)}
-    points = jnp.arange(size, dtype=jnp.int64)
-    best = descent.descend(p, points, start, jnp.asarray(size, jnp.int64), **work)
+    # Small things stay in numpy: every operation of jax outside a compiled stage would be compiled on its own.
+    best = descent.descend(p, np.arange(size), start, np.asarray(size), **work)
     x, F, converged = best.x, best.free_energy, best.converged
     if species == 2:
-        axis = descent.descend(*_each_alone(p, jnp.where(x > ZERO_FIELD, x, start)), **work)
-        x, F, converged, alone = _take_alone(x, F, converged, axis)
-        todo, kicked = _ask_other(x, alone)
-        if isinstance(alone, jax.core.Tracer) or bool(alone.any()):
-            joint = descent.descend(p, todo, kicked, alone.sum(), **work)
+        axis = descent.descend(*_each_alone(p, x, start), **work)
+        x, F, converged, alone, todo, kicked, count = _take_alone(x, F, converged, axis)
+        if isinstance(count, jax.core.Tracer) or int(count):
+            joint = descent.descend(p, todo, kicked, count, **work)
             x, F = _take_joint(x, F, alone, todo, joint)
     return _with_normal(p, x, F, converged, n_max=n_max)
 
@@ -105,8 +105,9 @@ def _prepare(mixture: Mixture, mu: Array, T: Array, *, n_max: int, sublattices: 
 
 
 @jax.jit
-def _each_alone(p: Sites, start: Array) -> tuple[Sites, Array, Array, Array]:
-    """Jobs in which only species 1 (first half of the queue) or only species 2 has fields."""
+def _each_alone(p: Sites, x: Array, start: Array) -> tuple[Sites, Array, Array, Array]:
+    """Jobs in which only species 1 (first half of the queue) or only species 2 has fields; from x where it has any."""
+    start = jnp.where(x > ZERO_FIELD, x, start)
     size, sublattices = p.energy.shape[:2]
     levels = round(p.energy.shape[-1] ** 0.5)
     second = p.energy.reshape(size, sublattices, levels, levels)
@@ -117,8 +118,11 @@ def _each_alone(p: Sites, start: Array) -> tuple[Sites, Array, Array, Array]:
 
 
 @jax.jit
-def _take_alone(x: Array, F: Array, converged: Array, axis: descent.Minimum) -> tuple[Array, Array, Array, Array]:
-    """Replace minima by lower ones with one species alone; the last array marks where."""
+def _take_alone(x: Array, F: Array, converged: Array, axis: descent.Minimum) -> tuple[Array, ...]:
+    """Replace minima by lower ones with one species alone, and ask whether the other joins in from there.
+
+    Returns x, F, converged, where one species is alone, and the queue that asks: points, starts, count.
+    """
     size = F.shape[0]
     alone = jnp.zeros(size, bool)
     for a in range(2):
@@ -129,14 +133,8 @@ def _take_alone(x: Array, F: Array, converged: Array, axis: descent.Minimum) -> 
         x = jnp.where(lower[:, None, None], jnp.concatenate(pair, -1), x)
         F = jnp.where(lower, energy, F)
         converged, alone = converged | lower, alone | lower
-    return x, F, converged, alone
-
-
-@jax.jit
-def _ask_other(x: Array, alone: Array) -> tuple[Array, Array]:
-    """Where one species alone is lowest, let the other join in from there: the points first, and their starts."""
     todo = jnp.argsort(~alone)
-    return todo, jnp.maximum(x, _KICK)[todo]
+    return x, F, converged, alone, todo, jnp.maximum(x, _KICK)[todo], alone.sum()
 
 
 @jax.jit
