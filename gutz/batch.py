@@ -186,7 +186,7 @@ def _without_order(p: Sites, space: LocalSpace) -> tuple[Array, Array]:
     order = jnp.argsort(p.energy, axis=-1)
     energy = jnp.take_along_axis(p.energy, order, -1)
     warm = p.T[:, None] > 0
-    beta = jnp.where(warm, 1.0 / jnp.where(warm, p.T[:, None], 1.0), 0.0)
+    beta = gibbs.inverse(p.T[:, None])
     beta = jnp.broadcast_to(beta, energy.shape[:-1])
     excitation = energy - energy[..., :1]
     scale = jnp.maximum(jnp.abs(p.energy).max(-1, keepdims=True), 1e-300)

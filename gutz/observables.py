@@ -94,16 +94,12 @@ def _averages(
     return out
 
 
-def _beta(T: Array) -> Array:
-    return jnp.where(T > 0, 1.0 / jnp.where(T > 0, T, 1.0), 0.0)
-
-
 def _operators(h: Array, T: Array, space: LocalSpace) -> Array:
     """Fields b + b†, numbers, and h/T (which a change of T couples to); shape (..., operator, state, state)."""
     number = jnp.asarray(space.number)[:, :, None] * jnp.eye(space.size)
     fixed = jnp.concatenate([jnp.asarray(space.field), number])
     fixed = jnp.broadcast_to(fixed, h.shape[:-2] + fixed.shape)
-    return jnp.concatenate([fixed, (h * _beta(T)[..., None, None])[..., None, :, :]], axis=-3)
+    return jnp.concatenate([fixed, (h * gibbs.inverse(T)[..., None, None])[..., None, :, :]], axis=-3)
 
 
 def _operators_in_levels(lv: gibbs.Levels, space: LocalSpace) -> Array:

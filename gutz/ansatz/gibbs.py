@@ -38,6 +38,12 @@ class Levels(NamedTuple):
     inverse_temperature: Array
 
 
+def inverse(T: Array) -> Array:
+    """1/T, and 0 at T = 0, where the ground-state branch takes over; safe to differentiate."""
+    warm = T > 0
+    return jnp.where(warm, 1.0 / jnp.where(warm, T, 1.0), 0.0)
+
+
 def levels(h: Array, T: Array, *, one_by_one: bool = False) -> Levels:
     """Eigensystem, Boltzmann weights, free energy and entropy; for values only, not to be differentiated.
 
@@ -66,7 +72,7 @@ def block_levels(h: Array, T: Array, *, one_by_one: bool = False) -> Levels:
     T = jnp.asarray(T)
     energy, vectors = _eigh(h, one_by_one)
     warm = T > 0
-    beta = jnp.where(warm, 1.0 / jnp.where(warm, T, 1.0), 0.0)
+    beta = inverse(T)
     lowest = energy[..., 0].min(-1)
     excitation = energy - lowest[..., None, None]
     scale = jnp.maximum(jnp.abs(h).max((-1, -2, -3)), 1e-300)
@@ -116,7 +122,7 @@ def _diagonal_matrix(d: Array) -> Array:
 
 def _effective_change(h: Array, T: Array, dh: Array, dT: Array) -> Array:
     """Fold a change of T into one of h: the state depends on h/T only, and not on a shift of h."""
-    beta = jnp.where(T > 0, 1.0 / jnp.where(T > 0, T, 1.0), 0.0)
+    beta = inverse(T)
     shift = jax.lax.stop_gradient(jnp.diagonal(h, axis1=-2, axis2=-1).min(-1))
     shifted = h - shift[..., None, None] * jnp.eye(h.shape[-1])
     return dh - shifted * (dT * beta)[..., None, None]
@@ -144,7 +150,7 @@ def entropy(h: Array, T: Array) -> Array:
 @entropy.defjvp
 def _entropy_jvp(primals: Any, tangents: Any) -> Any:
     (h, T), (dh, dT) = primals, tangents
-    beta = jnp.where(T > 0, 1.0 / jnp.where(T > 0, T, 1.0), 0.0)
+    beta = inverse(T)
     # tr(drho) = 0, so the mean of h may be taken out; this keeps the digits at low T.
     mean = jax.lax.stop_gradient((state(h, T) * h).sum((-1, -2)))
     centred = h - mean[..., None, None] * jnp.eye(h.shape[-1])
@@ -274,7 +280,7 @@ def _first_jvp(primals: Any, tangents: Any) -> Any:
     change = jnp.zeros(value.shape) if isinstance(dA, ad.Zero) else _first_p.bind(h, T, dA)
     if not (isinstance(dh, ad.Zero) and isinstance(dT, ad.Zero)):
         dh, dT = _tangent(dh, h), _tangent(dT, T)
-        beta = jnp.where(T > 0, 1.0 / jnp.where(T > 0, T, 1.0), 0.0)
+        beta = inverse(T)
         other = jnp.broadcast_to(_effective_change(h, T, dh, dT), value.shape)
         full = jnp.broadcast_to(A, value.shape)
         change = change + _second_p.bind(h, T, full, other) - value * (dT * beta)[..., None, None]

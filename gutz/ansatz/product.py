@@ -31,14 +31,6 @@ class Sites(NamedTuple):
     T: Array
 
 
-class Statistics(NamedTuple):
-    """Single-site averages. free_energy, entropy: (..., sublattice); state: (..., sublattice, state, state)."""
-
-    free_energy: Array
-    entropy: Array
-    state: Array
-
-
 def sites(mixture: Mixture, mu: Array, T: Array, space: LocalSpace, sublattices: int) -> Sites:
     """Interaction energies minus chemical potential of every basis state, per sublattice."""
     n = jnp.asarray(space.number)
@@ -66,13 +58,6 @@ def hamiltonian(p: Sites, x: Array, space: LocalSpace) -> Array:
     """Trial Hamiltonian of each site, shape (..., sublattice, state, state)."""
     coupled = jnp.einsum("...a,aij->...ij", fields_at(p, x), jnp.asarray(space.field))
     return p.energy[..., :, None] * jnp.eye(space.size) - coupled
-
-
-def statistics(p: Sites, x: Array, space: LocalSpace) -> Statistics:
-    """Averages in the trial state; every entry can be differentiated in all parameters."""
-    h = hamiltonian(p, x, space)
-    T = jnp.broadcast_to(p.T[..., None], h.shape[:-2])
-    return Statistics(gibbs.free_energy(h, T), gibbs.entropy(h, T), gibbs.state(h, T))
 
 
 def apply_fields(vectors: Array, space: LocalSpace) -> Array:
@@ -107,7 +92,8 @@ def free_energy(p: Sites, x: Array, trial: Array, phi: Array) -> Array:
 
 def residual(p: Sites, x: Array, space: LocalSpace) -> Array:
     """x - phi(x), zero at a stationary point; shape as x."""
-    return x - order(statistics(p, x, space).state, space)
+    h = hamiltonian(p, x, space)
+    return x - order(gibbs.state(h, jnp.broadcast_to(p.T[..., None], h.shape[:-2])), space)
 
 
 def softness(p: Sites, chi: Array) -> Array:
