@@ -14,6 +14,7 @@ from matplotlib.collections import QuadMesh
 from gutz import labels, plots, style
 from gutz.errors import InputError
 from gutz.phases import WORDS, Phase
+from gutz.plots import diagram
 from gutz.status import Status
 
 
@@ -66,7 +67,7 @@ def test_phases_are_named_inside_their_regions():
     across, up = labels.pixel_grid(panel)
     box = panel.get_window_extent()
     codes = data.phase.transpose("T", "depth").values
-    pixels = codes[np.ix_(plots._cells(data["T"].values, up), plots._cells(data["depth"].values, across))]
+    pixels = codes[np.ix_(diagram._cells(data["T"].values, up), diagram._cells(data["depth"].values, across))]
     for text in panel.texts:
         extent = text.get_window_extent(renderer)
         inside = pixels[

@@ -1,24 +1,19 @@
 """Figures of scans: phase diagrams, maps of any variable, lines.
 
 In:  a dataset as `gutz.scan.open_run` returns it.
-Out: matplotlib `Figure` objects (never pyplot), saved as PNG and PDF by `save`.
+Out: matplotlib `Figure` objects (never pyplot).
 
 The first axis of a scan runs along x, the second along y, a third makes small panels; further axes are held
 at their middle values, which the caption says. Points not to be trusted are hatched, never hidden.
 """
 
 import math
-import warnings
-from collections.abc import Callable, Iterator, Mapping, Sequence
-from contextlib import contextmanager
-from pathlib import Path
+from collections.abc import Callable, Mapping, Sequence
 from typing import Any
 
-import matplotlib
 import numpy as np
 import xarray as xr
 from matplotlib.axes import Axes
-from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.colors import BoundaryNorm, ListedColormap
 from matplotlib.figure import Figure
 from matplotlib.patches import Patch
@@ -28,6 +23,7 @@ from numpy.typing import NDArray
 from gutz import labels, style
 from gutz.errors import InputError
 from gutz.phases import WORDS, Phase
+from gutz.plots.canvas import new_figure, settle, styled
 from gutz.status import UNTRUSTED
 
 MOST_PANELS = 4
@@ -38,7 +34,6 @@ _WORDS = {int(phase): WORDS[phase] for phase in Phase}
 _COLOURS = {int(phase): colour for phase, colour in style.PHASE_COLOURS.items()}
 _LEGEND_COLUMNS = 3
 _NO_LABEL = -99
-_PANEL_WIDTH, _PANEL_HEIGHT = 3.5, 2.9
 
 
 def draw(dataset: xr.Dataset, name: str) -> Figure:
@@ -51,7 +46,7 @@ def draw(dataset: xr.Dataset, name: str) -> Figure:
         raise InputError(f'"{name}" is not in this run; it has {", ".join(map(str, dataset.data_vars))}')
     if not axes:
         raise InputError("this run has no axes to draw along")
-    with _styled():
+    with styled():
         if len(axes) == 1:
             return _lines(dataset, axes[0], name)
         return _maps(dataset, axes, name)
@@ -68,8 +63,8 @@ def parameters(
 
     x: axis values, shape (n,); words: name and unit of the axis; columns: energies in `unit`, (n,) each.
     """
-    with _styled():
-        figure = _new_figure(1, 1, width=6.4)
+    with styled():
+        figure = new_figure(1, 1, width=6.4)
         panel = figure.subplots()
         _frame(panel, x, None)
         panel.set_yscale("log")
@@ -83,35 +78,9 @@ def parameters(
         panel.set_xlabel(style.quantity(*words), parse_math=False)
         panel.set_ylabel(style.quantity("Energy", unit), parse_math=False)
         panel.set_title(style.clean(title, 80), loc="left", parse_math=False)
-        _settle(figure)
+        settle(figure)
         _name_ends(panel, ends)
         return figure
-
-
-def save(figure: Figure, path: Path) -> list[Path]:
-    """Save as PNG and PDF beside each other, whole or not at all; returns both paths. No dates inside."""
-    made = []
-    with _styled():
-        _settle(figure)
-        figure.set_layout_engine("none")
-        for ending, metadata in (
-            (".png", {"Software": None}),
-            (".pdf", {"CreationDate": None, "Creator": "gutz"}),
-        ):
-            final = path.with_name(path.name + ending)
-            temporary = path.with_name(path.name + ending + ".partial")
-            figure.savefig(temporary, format=ending[1:], dpi=style.DPI, metadata=metadata)
-            temporary.replace(final)
-            made.append(final)
-    return made
-
-
-@contextmanager
-def _styled() -> Iterator[None]:
-    """The house style, for this drawing only. Titles may use scripts the font lacks: boxes are better than nothing."""
-    with matplotlib.rc_context(style.RC), warnings.catch_warnings():
-        warnings.filterwarnings("ignore", message="Glyph .* missing", category=UserWarning)
-        yield
 
 
 def _maps(dataset: xr.Dataset, axes: list[str], name: str) -> Figure:
@@ -119,7 +88,7 @@ def _maps(dataset: xr.Dataset, axes: list[str], name: str) -> Figure:
     dataset, held = _held(dataset, axes[3:])
     columns = _slices(dataset, axes[2]) if len(axes) > 2 else [(dataset, "")]
     rows = _components(dataset, name)
-    figure = _new_figure(len(columns), len(rows))
+    figure = new_figure(len(columns), len(rows))
     grid = figure.subplots(len(rows), len(columns), sharex=True, sharey=True, squeeze=False)
     numbers = [dataset[name].isel(selection).values for selection, _ in rows]
     drawn: list[Any] = []
@@ -152,7 +121,7 @@ def _maps(dataset: xr.Dataset, axes: list[str], name: str) -> Figure:
 
 def _lines(dataset: xr.Dataset, axis: str, name: str) -> Figure:
     """One panel of lines over a strip that shows the phases; `phase` itself shows the condensates."""
-    figure = _new_figure(1, 1, width=6.4)
+    figure = new_figure(1, 1, width=6.4)
     strip, panel = figure.subplots(2, 1, sharex=True, height_ratios=(1, 9))
     x = dataset[axis].values
     shown = "condensate" if name == "phase" else name
@@ -209,19 +178,6 @@ def _merged(columns: Mapping[str, NDArray[np.float64]]) -> dict[str, NDArray[np.
         else:
             merged[f"{same}, {name}"] = merged.pop(same)
     return merged
-
-
-def _new_figure(columns: int, rows: int, width: float | None = None) -> Figure:
-    wide = width if width is not None else 1.6 + _PANEL_WIDTH * columns * (1.35 if columns == 1 else 0.85)
-    figure = Figure(figsize=(wide, 1.3 + _PANEL_HEIGHT * rows * (1.1 if rows == 1 else 0.9)), dpi=style.DPI)
-    FigureCanvasAgg(figure)
-    figure.set_layout_engine("constrained", h_pad=0.06, w_pad=0.06)
-    return figure
-
-
-def _settle(figure: Figure) -> None:
-    """Fix the layout, so that pixels of the panels are known."""
-    figure.draw_without_rendering()
 
 
 def _held(dataset: xr.Dataset, axes: Sequence[str]) -> tuple[xr.Dataset, str]:
@@ -386,7 +342,7 @@ def _name_with_legend(figure: Figure, panels: Sequence[Axes], caption: Text, att
     """Place names; where some need a legend, make room for it above the caption and place again."""
     words, rows = caption.get_text(), 0
     while True:
-        _settle(figure)
+        settle(figure)
         small = attempt()
         needed = -(-len(small) // _LEGEND_COLUMNS)
         if needed <= rows:
