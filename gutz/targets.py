@@ -54,7 +54,7 @@ def solve_given(mixture: Mixture, mu: Array, T: Array, *, n_max: int, sublattice
 
 def solve_points(mixture: Mixture, *, n_max: int, ansatz: str) -> tuple[Numbers, np.ndarray]:
     """Solve a flat mixture of numbers, meeting its fillings and entropies. Returns outputs and fields."""
-    evaluate = _Evaluator(mixture, n_max, ansatz)
+    evaluate = Evaluator(mixture, n_max, ansatz)
     size = mixture.shape[0]
     if mixture.filling is not None:
         mu, T, remark = _meet_fillings(mixture, evaluate)
@@ -69,7 +69,7 @@ def solve_points(mixture: Mixture, *, n_max: int, ansatz: str) -> tuple[Numbers,
     return outputs, result.fields
 
 
-class _Evaluator:
+class Evaluator:
     """Global solves of chosen points at trial values of mu and T, as numpy arrays, in padded batches."""
 
     def __init__(self, mixture: Mixture, n_max: int, ansatz: str) -> None:
@@ -116,7 +116,7 @@ def _first_mu(mixture: Mixture) -> np.ndarray:
     return mixture.U * (n - 0.5) + mixture.U12[:, None] * other - 0.5 * mixture.z_t
 
 
-def _meet_fillings(mixture: Mixture, evaluate: "_Evaluator") -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+def _meet_fillings(mixture: Mixture, evaluate: Evaluator) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     """Maximise F + mu n* (+ T S*) over mu (and T). Returns mu, T and status bits."""
     size, species = mixture.shape[0], mixture.species
     n_goal = np.asarray(mixture.filling)
@@ -210,7 +210,7 @@ def _trust_step(response: np.ndarray, miss: np.ndarray, region: np.ndarray, free
 
 def _centre_plateaus(
     mixture: Mixture,
-    evaluate: "_Evaluator",
+    evaluate: Evaluator,
     mu: np.ndarray,
     T: np.ndarray,
     response: np.ndarray,
@@ -243,7 +243,7 @@ def _centre_plateaus(
     return mu, flat
 
 
-def _meet_entropy(mixture: Mixture, evaluate: "_Evaluator") -> tuple[np.ndarray, np.ndarray]:
+def _meet_entropy(mixture: Mixture, evaluate: Evaluator) -> tuple[np.ndarray, np.ndarray]:
     """Find T at given mu where the entropy per particle is the one asked for, by bisection in log T."""
     size = mixture.shape[0]
     goal = np.asarray(mixture.entropy)
