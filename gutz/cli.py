@@ -157,6 +157,77 @@ def check(**options: Any) -> int:
     return command.run(**options)
 
 
+@cli.group(
+    short_help="Quasi-exact chains that mean field is judged by.",
+    help=_example(
+        "Example: gutz reference list\n\n"
+        "Quasi-exact one-dimensional chains, stored: the measure of gutz compare. docs/compare.md explains them."
+    ),
+)
+def reference() -> None:
+    """Collect the commands on references."""
+
+
+_STORE = click.option("--file", "file", type=click.Path(path_type=Path), help="Another file of reference entries.")
+
+
+@reference.command(
+    "make",
+    short_help="Make the entries of a plan; takes minutes each.",
+    help=_example(
+        "Example: gutz reference make gutz/data/references-plan.toml --out my-references\n\n"
+        "Solve the chains a plan lists, and save each as soon as it is done. Started again, it continues."
+    ),
+)
+@_FILE
+@_out("Folder for references.nc [default: the plan's name].")
+@click.option("--only", multiple=True, metavar="NAME", help="Make this entry only. Repeatable.")
+@_JSON
+@_QUIET
+@_FORCE
+@_DEBUG
+def reference_make(**options: Any) -> int:
+    """Make entries."""
+    from gutz.commands import reference as command
+
+    return command.run_make(**options)
+
+
+@reference.command(
+    "list",
+    short_help="What is stored, and how good it is.",
+    help=_example("Example: gutz reference list\n\nEvery stored entry, with its sizes and errors."),
+)
+@_STORE
+@_JSON
+@_DEBUG
+def reference_list(**options: Any) -> int:
+    """List entries."""
+    from gutz.commands import reference as command
+
+    return command.run_list(**options)
+
+
+@reference.command(
+    "verify",
+    short_help="Recompute a small entry and compare.",
+    help=_example(
+        "Example: gutz reference verify\n\n"
+        "Solve the shortest chain of an entry again (a random small one without NAME) and compare every number."
+    ),
+)
+@click.argument("name", required=False)
+@_STORE
+@click.option("--seed", type=int, help="Of the random choice.")
+@_JSON
+@_DEBUG
+def reference_verify(**options: Any) -> int:
+    """Verify an entry."""
+    from gutz.commands import reference as command
+
+    return command.run_verify(**options)
+
+
 def _load_numerics(quiet: bool) -> None:
     """Load jax, with its cache of compiled code and 64-bit numbers switched on."""
     problem = cache.enable()
