@@ -4,7 +4,6 @@ In:  a flat `Mixture`, chemical potentials, temperatures and a cutoff.
 Out: converged fields, outputs and status bits of every point. No Python loop over points; usable inside jit.
 """
 
-from functools import partial
 from typing import Any, NamedTuple
 
 import jax
@@ -13,6 +12,7 @@ import numpy as np
 
 from gutz.ansatz import descent, gibbs, product
 from gutz.ansatz.product import Sites
+from gutz.compiled import compiled
 from gutz.fock import LocalSpace, local_space
 from gutz.model import Mixture
 from gutz.observables import observe
@@ -51,7 +51,7 @@ def solve_batch(mixture: Mixture, mu: Array, T: Array, *, n_max: int, sublattice
     return evaluate(mixture, mu, T, fields, converged, n_max=n_max)
 
 
-@partial(jax.jit, static_argnames=("n_max",))
+@compiled(static=("n_max",))
 def evaluate(mixture: Mixture, mu: Array, T: Array, fields: Array, converged: Array, *, n_max: int) -> Batch:
     """Outputs, responses and status at given fields, block by block so that memory stays small."""
     space = local_space(n_max, mixture.species)
@@ -96,7 +96,7 @@ def global_minimum(mixture: Mixture, mu: Array, T: Array, *, n_max: int, sublatt
     return _with_normal(p, x, F, converged, n_max=n_max)
 
 
-@partial(jax.jit, static_argnames=("n_max", "sublattices"))
+@compiled(static=("n_max", "sublattices"))
 def _prepare(mixture: Mixture, mu: Array, T: Array, *, n_max: int, sublattices: int) -> tuple[Sites, Array]:
     space = local_space(n_max, mixture.species)
     p = product.sites(mixture, mu, T, space, sublattices)
@@ -104,7 +104,7 @@ def _prepare(mixture: Mixture, mu: Array, T: Array, *, n_max: int, sublattices: 
     return p, jnp.broadcast_to(start, (start.shape[0], sublattices, mixture.species))
 
 
-@jax.jit
+@compiled()
 def _each_alone(p: Sites, x: Array, start: Array) -> tuple[Sites, Array, Array, Array]:
     """Jobs in which only species 1 (first half of the queue) or only species 2 has fields; from x where it has any."""
     start = jnp.where(x > ZERO_FIELD, x, start)
@@ -117,7 +117,7 @@ def _each_alone(p: Sites, x: Array, start: Array) -> tuple[Sites, Array, Array, 
     return one, jnp.arange(2 * size, dtype=jnp.int64), starts, jnp.asarray(2 * size, jnp.int64)
 
 
-@jax.jit
+@compiled()
 def _take_alone(x: Array, F: Array, converged: Array, axis: descent.Minimum) -> tuple[Array, ...]:
     """Replace minima by lower ones with one species alone, and ask whether the other joins in from there.
 
@@ -137,14 +137,14 @@ def _take_alone(x: Array, F: Array, converged: Array, axis: descent.Minimum) -> 
     return x, F, converged, alone, todo, jnp.maximum(x, _KICK)[todo], alone.sum()
 
 
-@jax.jit
+@compiled()
 def _take_joint(x: Array, F: Array, alone: Array, todo: Array, joint: descent.Minimum) -> tuple[Array, Array]:
     lower = joint.converged & (joint.free_energy < F[todo] - _tie(F[todo])) & alone[todo]
     x = x.at[todo].set(jnp.where(lower[:, None, None], joint.x, x[todo]))
     return x, F.at[todo].set(jnp.where(lower, joint.free_energy, F[todo]))
 
 
-@partial(jax.jit, static_argnames=("n_max",))
+@compiled(static=("n_max",))
 def _with_normal(p: Sites, x: Array, F: Array, converged: Array, *, n_max: int) -> tuple[Array, Array]:
     """Compare with the state without order; fields that have decayed are set to exactly zero.
 

@@ -8,7 +8,6 @@ found for the numbers behind the tracers, and two chord-Newton steps on the stat
 attach the derivatives: each step makes one more order of the implicit function exact.
 """
 
-from functools import partial
 from typing import Any
 
 import jax
@@ -18,6 +17,7 @@ import numpy as np
 from gutz import limits, precision, targets
 from gutz.ansatz import descent, gibbs, product
 from gutz.batch import CUTOFF_WEIGHT
+from gutz.compiled import compiled
 from gutz.errors import InputError
 from gutz.fock import local_space
 from gutz.model import Mixture
@@ -164,13 +164,13 @@ def _attach_derivatives(
     return dict(outputs) | traced
 
 
-@partial(jax.jit, static_argnames=("n_max",))
+@compiled(static=("n_max",))
 def _responses(mixture: Mixture, mu: Array, T: Array, x: Array, *, n_max: int) -> tuple[Array, Array]:
     space = local_space(n_max, mixture.species)
     return observe(mixture, mu, T, x, space, differentiable=False)[1:]
 
 
-@partial(jax.jit, static_argnames=("n_max", "unknown"))
+@compiled(static=("n_max", "unknown"))
 def _implicit(
     mixture: Mixture,
     values: Mixture,

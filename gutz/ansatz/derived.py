@@ -8,7 +8,6 @@ add the response of the fields, dx/dy = -H^-1 ∂²F/∂x∂y, from central diff
 has no such part: the functional is even in the twist at any fields.
 """
 
-from functools import partial
 from typing import Any, NamedTuple
 
 import jax
@@ -19,6 +18,7 @@ from gutz.ansatz import bond, dressed, families
 from gutz.ansatz.dressed import Sites
 from gutz.ansatz.families import Family, Plan
 from gutz.ansatz.selection import DressedMinimum
+from gutz.compiled import compiled
 from gutz.fock import local_space
 from gutz.model import Mixture
 
@@ -46,7 +46,7 @@ class DressedObservables(NamedTuple):
     stiffness: Array
 
 
-@partial(jax.jit, static_argnames=("plan",))
+@compiled(static=("plan",))
 def _responses(p: Sites, number: Array, x: Array, lam: Array, along: Array, *, plan: Plan) -> Array:
     """Second derivatives of F in (directions `along` of the fields, mu, T); along: (n, sublattice, field)."""
     f = bond.frame(plan.n_max, plan.species, "full")

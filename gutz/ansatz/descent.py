@@ -9,7 +9,6 @@ Newton steps are taken where the curvature is positive and the free energy falls
 step x -> phi(x), which can only lower the free energy (F_tr is concave in the fields).
 """
 
-from functools import partial
 from typing import Any, NamedTuple
 
 import jax
@@ -17,6 +16,7 @@ import jax.numpy as jnp
 
 from gutz.ansatz import gibbs, product
 from gutz.ansatz.product import Sites
+from gutz.compiled import compiled
 from gutz.fock import LocalSpace, local_space
 
 Array = Any
@@ -81,7 +81,7 @@ def _look(p: Sites, x: Array, space: LocalSpace) -> _Look:
     return _Look(product.free_energy(p, x, lv.free_energy, phi), phi, chi)
 
 
-@partial(jax.jit, static_argnames=("n_max", "lanes"))
+@compiled(static=("n_max", "lanes"))
 def descend(p: Sites, point: Array, start: Array, count: Array, *, n_max: int, lanes: int) -> Minimum:
     """Minimise from every start in the queue.
 

@@ -16,7 +16,6 @@ Where no family is left, the product minimum is returned with `Status.FALLBACK`.
 """
 
 from enum import IntEnum
-from functools import partial
 from typing import Any, NamedTuple
 
 import jax
@@ -25,6 +24,7 @@ import numpy as np
 
 from gutz.ansatz import bond, dressed
 from gutz.ansatz.dressed import Look, Sites
+from gutz.compiled import compiled
 
 Array = Any
 
@@ -127,7 +127,7 @@ def makes_order(name: str) -> bool:
     return name[0] in "JKM"
 
 
-@partial(jax.jit, static_argnames=("plan", "lanes"))
+@compiled(static=("plan", "lanes"))
 def descend(p: Sites, point: Array, start: Array, scale: Array, count: Array, *, plan: Plan, lanes: int) -> Reached:
     """Minimise from every start in a queue of jobs, stage by stage in λ; lanes that are done take the next job.
 
@@ -270,7 +270,7 @@ def _bfgs(B: Array, s: Array, y: Array) -> Array:
     return jnp.where(usable[..., None, None], B + change, B)
 
 
-@partial(jax.jit, static_argnames=("plan",))
+@compiled(static=("plan",))
 def survey(p: Sites, x: Array, lam: Array, *, plan: Plan) -> Look:
     """One evaluation of the functional at given fields (all of `dressed.NAMES`, any kind)."""
     f = bond.frame(plan.n_max, plan.species, plan.kind)
@@ -287,7 +287,7 @@ class Onset(NamedTuple):
     product: Array
 
 
-@partial(jax.jit, static_argnames=("plan",))
+@compiled(static=("plan",))
 def onset(p: Sites, x: Array, lam: Array, *, plan: Plan) -> Onset:
     """Curvature in (J_1, J_2) of every sublattice at fixed other fields, both relative signs included.
 
