@@ -7,7 +7,7 @@ Out: plain dictionaries of texts, numbers and lists of whole numbers; no array l
 from enum import IntFlag
 from typing import Any
 
-from gutz.phases import WORDS, Phase
+from gutz.phases import WORDS, Phase, Range
 from gutz.status import Status
 from gutz.variables import ENERGY, VARIABLES
 
@@ -30,6 +30,9 @@ def of_output(name: str, energy_unit: str) -> dict[str, Any]:
     if name == "phase":
         attributes["flag_values"] = [int(phase) for phase in Phase]
         attributes["flag_meanings"] = " ".join(WORDS[phase].replace(" ", "_") for phase in Phase)
+    elif name == "order_range":
+        attributes["flag_values"] = [int(reach) for reach in Range]
+        attributes["flag_meanings"] = "none long-range quasi-long-range short-range"
     elif name == "status":
         attributes |= of_flags(Status, variable.long_name)
     return attributes

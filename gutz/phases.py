@@ -48,6 +48,31 @@ WORDS: dict[Phase, str] = {
     Phase.COLLAPSE: "collapse",
 }
 
+
+class Range(IntEnum):
+    """How far superfluid order reaches; the integer values are stored in datasets and never change meaning."""
+
+    NONE = 0
+    LONG = 1
+    QUASI = 2
+    SHORT = 3
+
+
+RANGE_WORDS: dict[Range, str] = {
+    Range.NONE: "",
+    Range.LONG: "",
+    Range.QUASI: "quasi-long-range ",
+    Range.SHORT: "short-range ",
+}
+"""Put before the word of a phase: power-law and exponential decay are said, true long-range order is not."""
+
+
+def words(phase: int, reach: int = Range.NONE) -> str:
+    """The phase in words, with the range of its order where that is not long."""
+    known = RANGE_WORDS.get(Range(reach), "") if reach in RANGE_WORDS else ""
+    return known + WORDS[Phase(phase)]
+
+
 ORDER_THRESHOLD = 1e-5
 """A field average above this counts as order; converged normal states come out as exactly zero."""
 

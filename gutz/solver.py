@@ -22,7 +22,8 @@ from gutz.errors import InputError
 from gutz.fock import local_space
 from gutz.model import Mixture
 from gutz.observables import observe
-from gutz.phases import Phase, label
+from gutz.order import by_dimension
+from gutz.phases import Phase
 from gutz.solution import Solution
 from gutz.status import Status
 from gutz.variables import ABSENT, VARIABLES
@@ -131,9 +132,13 @@ class _Collector:
             out["status"] = out["status"] | np.where(demixing, int(Status.DEMIXING), 0).astype(np.int32)
         out["status"] = np.where(gone, int(Status.COLLAPSE), out["status"]).astype(np.int32)
         # Where a superlattice makes the sublattices differ, their densities differ without any order.
-        phase = label(out if mixture.sublattices == 1 else out | {"staggering": np.zeros_like(out["staggering"])})
-        phase = np.where((out["status"] & int(Status.FILLING_GAP)) > 0, np.int8(Phase.SEPARATED), phase)
-        out["phase"] = np.where(gone, np.int8(Phase.COLLAPSE), phase)
+        seen = out if mixture.sublattices == 1 else out | {"staggering": np.zeros_like(out["staggering"])}
+        solved = ~gone
+        found = by_dimension({name: values[solved] for name, values in seen.items()}, np.asarray(mixture.t)[solved])
+        for name, values in found.items():
+            out[name][solved] = values
+        out["phase"][(out["status"] & int(Status.FILLING_GAP)) > 0] = Phase.SEPARATED
+        out["phase"][gone] = Phase.COLLAPSE
         return out, self.fields
 
 

@@ -12,7 +12,7 @@ import numpy as np
 
 from gutz import console
 from gutz.commands.points import load, values
-from gutz.phases import WORDS, Phase
+from gutz.phases import words
 from gutz.scan import schema
 from gutz.scan.chunk import compute_chunk
 from gutz.scan.plan import Plan, check_physics
@@ -41,7 +41,7 @@ def _record(point: Plan, found: dict[str, Any]) -> dict[str, Any]:
     status = int(found["status"])
     return {
         "point": {axis.name: {"value": axis.values[0], "units": axis.unit} for axis in point.axes},
-        "phase": WORDS[Phase(int(found["phase"]))],
+        "phase": words(int(found["phase"]), int(found["order_range"])),
         "trusted": not status & UNTRUSTED,
         "remarks": describe(status),
         "variables": {
@@ -58,7 +58,7 @@ def _print(point: Plan, found: dict[str, Any]) -> None:
     )
     rows = []
     for name, field in schema.layout(point).items():
-        if name in ("phase", "status", "cautions"):
+        if name in ("phase", "order_range", "status", "cautions"):
             continue
         value = found[name]
         if field.dims[-1:] == ("direction",) and np.array_equal(
@@ -67,7 +67,7 @@ def _print(point: Plan, found: dict[str, Any]) -> None:
             value = value[..., 0]  # alike along x, y and z: said once
         entries = "  ".join(console.number(float(entry)) for entry in np.ravel(value))
         rows.append((field.attributes["long_name"], name, entries, _unit(field.attributes["units"])))
-    rows.insert(0, ("Phase", "phase", WORDS[Phase(int(found["phase"]))], ""))
+    rows.insert(0, ("Phase", "phase", words(int(found["phase"]), int(found["order_range"])), ""))
     console.table((where or "the point", "name", "value", "unit"), rows)
     for sentence in describe(int(found["status"])):
         console.note(f"note: {sentence}", quiet=False)

@@ -22,7 +22,7 @@ from numpy.typing import NDArray
 
 from gutz import labels, style
 from gutz.errors import InputError
-from gutz.phases import WORDS, Phase
+from gutz.phases import Phase, Range, words
 from gutz.plots.canvas import new_figure, settle, styled
 from gutz.status import UNTRUSTED
 
@@ -30,8 +30,11 @@ MOST_PANELS = 4
 """Panels side by side along a third axis."""
 
 _KINDS = [*Phase]
-_WORDS = {int(phase): WORDS[phase] for phase in Phase}
-_COLOURS = {int(phase): colour for phase, colour in style.PHASE_COLOURS.items()}
+_REACH = 100
+"""A region is named by phase + _REACH x range: the same phase may reach differently far in one picture."""
+_REACHES = (0, Range.QUASI, Range.SHORT)
+_WORDS = {int(phase) + _REACH * reach: words(phase, reach) for phase in Phase for reach in _REACHES}
+_COLOURS = {int(phase) + _REACH * reach: style.PHASE_COLOURS[phase] for phase in Phase for reach in _REACHES}
 _LEGEND_COLUMNS = 3
 _NO_LABEL = -99
 
@@ -138,8 +141,8 @@ def _lines(dataset: xr.Dataset, axis: str, name: str) -> Figure:
         panel.legend(frameon=False, loc="best")
     panel.set_xlabel(_axis_words(dataset, axis), parse_math=False)
     panel.set_ylabel(_axis_words(dataset, shown), parse_math=False)
-    codes = dataset["phase"].values[None, :]
-    _fill_phases(strip, x, np.array([0.0, 1.0]), np.repeat(codes, 2, axis=0))
+    _fill_phases(strip, x, np.array([0.0, 1.0]), np.repeat(dataset["phase"].values[None, :], 2, axis=0))
+    codes = _regions(dataset).values[None, :]
     strip.set_ylim(0, 1)
     strip.set_axis_off()
     caption = _caption(figure, dataset, "")
@@ -263,6 +266,15 @@ def _cells(values: NDArray[np.float64], at: NDArray[np.float64]) -> NDArray[np.i
     return np.clip(np.searchsorted(edges, at) - 1, 0, values.size - 1)
 
 
+def _regions(part: xr.Dataset) -> xr.DataArray:
+    """Codes of `_WORDS`."""
+    phase = part["phase"].astype(int)
+    if "order_range" not in part:
+        return phase
+    reach = part["order_range"]
+    return phase + _REACH * reach.where(reach.isin(_REACHES), 0).astype(int)
+
+
 def _fill_phases(panel: Axes, x: NDArray[np.float64], y: NDArray[np.float64], codes: NDArray[np.integer]) -> None:
     colours = ListedColormap([style.PHASE_COLOURS[phase] for phase in _KINDS])
     norm = BoundaryNorm(np.arange(len(_KINDS) + 1) - 0.5 + int(_KINDS[0]), len(_KINDS))
@@ -321,7 +333,7 @@ def _name_regions(
         for j, (part, _) in enumerate(columns):
             panel = grid[0, j]
             across, up = labels.pixel_grid(panel)
-            codes = part["phase"].transpose(axes[1], axes[0]).values
+            codes = _regions(part).transpose(axes[1], axes[0]).values
             pixels = codes[np.ix_(_cells(part[axes[1]].values, up), _cells(part[axes[0]].values, across))]
             bad = _untrusted(part.transpose(axes[1], axes[0], ...))
             hatched = bad[np.ix_(_cells(part[axes[1]].values, up), _cells(part[axes[0]].values, across))]
