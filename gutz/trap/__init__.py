@@ -1,0 +1,1 @@
+"""Clouds in a trap: local density, atom numbers, entropy, loading; and what an experiment sees of them."""
