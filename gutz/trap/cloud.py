@@ -314,7 +314,7 @@ def tight(trap: Trap, gas: LocalGas, y: FloatArray, nodes: Nodes) -> list[str]:
     words = []
     for a in np.flatnonzero(slope > smooth):
         words.append(
-            f"species {a + 1}: from site to site at the edge the trap rises by {slope[a] / smooth[a]:.2g} times the larger "
-            "of the bandwidth per direction and T; local density is rough for the superfluid there"
+            f"species {a + 1}: from site to site at the edge the trap rises by {slope[a] / smooth[a]:.2g} times the "
+            "larger of the bandwidth per direction and T; local density is rough for the superfluid there"
         )
     return words
