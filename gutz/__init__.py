@@ -17,6 +17,7 @@ else:
 __version__ = "0.1.0"
 
 _HOME = {
+    "compare": "gutz.comparison.compare",
     "critical_temperature": "gutz.temperature",
     "exchange_couplings": "gutz.exchange",
     "Mixture": "gutz.model",
@@ -26,7 +27,7 @@ _HOME = {
     "Status": "gutz.status",
 }
 
-__all__ = ["critical_temperature", "exchange_couplings", "Mixture", "Phase", "Solution", "solve", "Status"]
+__all__ = ["compare", "critical_temperature", "exchange_couplings", "Mixture", "Phase", "Solution", "solve", "Status"]
 
 
 def __getattr__(name: str) -> Any:

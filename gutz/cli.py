@@ -157,6 +157,33 @@ def check(**options: Any) -> int:
     return command.run(**options)
 
 
+@cli.command(
+    short_help="Where mean field can be believed in one dimension.",
+    help=_example(
+        "Example: gutz compare\n\n"
+        "Set mean field beside quasi-exact chains: the stored set, --entry NAME, a point of a scan FILE, or the FOLDER "
+        "of a finished run.\n\n"
+        "Exit code 1: some point is wrong with every ansatz, or has no reference nearby."
+    ),
+)
+@click.argument("target", required=False, type=click.Path(path_type=Path), metavar="[FILE|FOLDER]")
+@_SET
+@_AT
+@click.option("--entry", multiple=True, metavar="NAME", help="A stored chain, see gutz reference list. Repeatable.")
+@click.option("--references", type=click.Path(path_type=Path), help="Another file of reference entries.")
+@_out("Write the comparison (netCDF) and its figure into this folder.")
+@_JSON
+@_QUIET
+@_FORCE
+@_DEBUG
+def compare(**options: Any) -> int:
+    """Compare with references."""
+    _load_numerics(quiet=options["quiet"])
+    from gutz.commands import compare as command
+
+    return command.run(**options)
+
+
 @cli.group(
     short_help="Quasi-exact chains that mean field is judged by.",
     help=_example(

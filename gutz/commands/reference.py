@@ -10,6 +10,7 @@ from pathlib import Path
 from typing import Any
 
 import filelock
+import numpy as np
 import xarray as xr
 
 from gutz import console
@@ -96,7 +97,9 @@ def _locked(path: Path) -> Any:
 
 def _record(name: str, dataset: xr.Dataset) -> dict[str, Any]:
     entry = plan.restore(dataset.attrs["entry"])
-    last = {key: float(dataset[key][-1]) if key in dataset else 0.0 for key in ("discarded", "energy_variance")}
+    last = {
+        key: float(np.ravel(dataset[key])[-1]) if key in dataset else 0.0 for key in ("discarded", "energy_variance")
+    }
     return {
         "name": name,
         "phase": WORDS[Phase(int(dataset["phase"]))],

@@ -82,7 +82,7 @@ def _laws(whole: xr.Dataset, entry: Entry) -> dict[str, Any]:
             continue
         values = whole[f"middle_{name}"]
         rows = np.atleast_2d(values.values)
-        laws = [decay.law(row, sites) for row in rows]
+        laws = [decay.law(row, sites, 0.0 if entry.T > 0 else 0.5) for row in rows]
         dims = values.dims[:-1]
         for key, words, units in (
             ("exponent", "exponent of the algebraic law", "1"),
@@ -113,7 +113,9 @@ def _phase(whole: xr.Dataset, entry: Entry) -> Phase:
             return Phase.MOTT
         return Phase.SUPERFLUID if moving[0] else Phase.UNDECIDED
     if moving.all():
-        return Phase.SUPERFLUID
+        # At a whole total filling the lattice holds the total density where its operator's dimension is below 2.
+        held = commensurate and whole["luttinger"].values.sum() < _LOCKING_K
+        return Phase.COUNTERFLOW if held else Phase.SUPERFLUID
     if moving.any():
         return Phase.SUPERFLUID_1 if moving[0] else Phase.SUPERFLUID_2
     staggered = whole["density"].values[..., -1] * (-1.0) ** (whole.sizes["distance"] - 1)

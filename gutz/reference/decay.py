@@ -32,11 +32,11 @@ class Law(NamedTuple):
     algebraic: float
 
 
-def law(values: Floats, sites: int) -> Law:
+def law(values: Floats, sites: int, power: float = 0.5) -> Law:
     """Fit both laws to a correlator by span (1 .. sites - 1), and tell which fits better.
 
-    The exponential law carries the factor r^(-1/2) a gap brings. The exponent's error is the change between the
-    nearer and the farther half of the spans. A correlator too small to fit is exponential with nan for its length.
+    The exponential law carries a factor r^-power: 1/2 for a gap, 0 for warmth. The exponent's error is the change
+    between the nearer and the farther half of the spans. A correlator too small to fit is exponential, length nan.
     """
     span = np.arange(1, sites)
     used = (span >= _FIRST) & (span <= max(_LAST * sites, _FIRST + 3)) & (values > _FLOOR)
@@ -45,7 +45,7 @@ def law(values: Floats, sites: int) -> Law:
     r, log_value = span[used].astype(float), np.log(values[used])
     log_f = np.log(_conformal(span[used], sites))
     eta, rest_algebraic = _line(log_f, log_value)
-    rate, rest_exponential = _line(r, log_value + 0.5 * np.log(r))
+    rate, rest_exponential = _line(r, log_value + power * np.log(r))
     half = len(r) // 2
     error = abs(_line(log_f[:half], log_value[:half])[0] - _line(log_f[half:], log_value[half:])[0])
     whole_window = used.sum() >= 0.8 * ((span >= _FIRST) & (span <= _LAST * sites)).sum()

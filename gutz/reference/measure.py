@@ -21,7 +21,7 @@ DISTANCES = 13
 """Correlators are summed over distances 0 .. DISTANCES - 1, or what the shortest chain holds."""
 
 _TOLERANCE = 1e-8
-_SWEEPS = 24
+_SWEEPS = 12
 
 
 class _Run(NamedTuple):
@@ -55,11 +55,13 @@ def measure(entry: Entry, notice: Callable[[str], None] = lambda words: None, *,
     rows: list[dict[str, Any]] = []
     data: dict[str, Any] = {}
     for number, run in enumerate(runs):
+        last = number == len(runs) - 1
         solved = _solve(entry, run.length, run.bond)
+        if last and entry.method == "sweeps":
+            data["energy_variance"] = ((), solved.state.variance)
         found = _correlators(entry, solved.state)
         rows.append(solved.numbers | _sums(found, distances))
         notice(f"{entry.name}: {run.length} sites, {run.bond} states: energy {solved.numbers['total_energy']:.8g}")
-        last = number == len(runs) - 1
         if last:
             data |= _middle(found)
         if run.length == entry.noise_length and run.bond == entry.bond and not shortest:
@@ -108,7 +110,7 @@ def _atoms(entry: Entry, length: int) -> tuple[int, ...]:
 def _solve(entry: Entry, length: int, bond: int) -> _Solved:
     """Solve one chain by the entry's method."""
     model = _model(entry, length)
-    numbers: dict[str, Any] = {"discarded": 0.0, "energy_variance": 0.0, "converged": 1}
+    numbers: dict[str, Any] = {"discarded": 0.0, "converged": 1}
     if entry.method == "free fermions":
         N = None if entry.T > 0 else _atoms(entry, length)[0]
         state: Any = chains.hard_core_chain(model, entry.T, N)
@@ -117,7 +119,7 @@ def _solve(entry: Entry, length: int, bond: int) -> _Solved:
         state = mps.ground_state(
             model, _atoms(entry, length), max_bond=bond, tolerance=_TOLERANCE, max_sweeps=_SWEEPS, seed=0
         )
-        numbers |= {"discarded": state.discarded, "energy_variance": state.variance, "converged": int(state.converged)}
+        numbers |= {"discarded": state.discarded, "converged": int(state.converged)}
         atoms = np.array(_atoms(entry, length), dtype=float)
     else:
         state = mps_thermal.thermal_state(model, entry.T, max_bond=bond)
@@ -212,8 +214,8 @@ def _two_maps(state: Any) -> Floats:
 
 
 def _gaps(entry: Entry) -> dict[str, Any]:
-    """Energies of the shortest chain with atoms added or taken away; `change` lists how many of each species."""
-    length = entry.lengths[0]
+    """Energies of the noise map's chain with atoms added or taken away; `added` lists how many of each species."""
+    length = entry.noise_length or entry.lengths[0]
     changes: list[tuple[int, ...]]
     if entry.species == 1:
         changes = [(1,), (-1,)]

@@ -42,7 +42,7 @@ class Entry:
     t, U: per species, one energy unit; U is ignored where n_max = 1. filling: atoms per site of each species, so
     that filling times every length is whole (ground states); thermal chains take `mu` instead, per species.
     lengths: open chains solved, rising. bond: most states kept. noise_length: the chain whose noise map is kept,
-    0 for none. gaps: whether energies with atoms added and taken away are kept (shortest chain).
+    0 for none. gaps: whether energies with atoms added and taken away are kept (same chain, or the shortest).
     """
 
     name: str

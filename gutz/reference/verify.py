@@ -23,7 +23,7 @@ _OTHERS = 2e-5
 SMALL_SECONDS = 60.0
 """Entries that took less time in all are candidates for a random check."""
 
-_IGNORED = ("discarded", "energy_variance", "converged")
+_IGNORED = ("discarded", "converged")
 
 
 class Check(NamedTuple):
