@@ -139,6 +139,62 @@ def scan(**options: Any) -> int:
 
 
 @cli.command(
+    short_help="Trace phase boundaries as curves.",
+    help=_example(
+        "Example: gutz boundary scans/counterflow-cubic.toml\n\n"
+        "Trace the boundaries between phases over the ranges of two axes, each point to one part in a million.\n\n"
+        "Writes boundary.nc and a figure; over a run of the same file in the folder, its phase figure as well."
+    ),
+)
+@_FILE
+@_SET
+@_AT
+@click.option("--axes", nargs=2, metavar="X Y", help="Axes along x and y [default: the first two without --at].")
+@click.option("--nodes", default=17, show_default=True, help="Points of the coarse grid along each axis.")
+@click.option(
+    "--straightness",
+    default=1e-3,
+    show_default=True,
+    help="Farthest a curve may lie from the lines drawn, as a fraction of the axes.",
+)
+@_out("Folder for the results [default: the file's name].")
+@_JSON
+@_QUIET
+@_FORCE
+@_DEBUG
+def boundary(**options: Any) -> int:
+    """Phase boundaries."""
+    _load_numerics(quiet=options["quiet"])
+    from gutz.commands import boundary as command
+
+    return command.run(**options)
+
+
+@cli.command(
+    short_help="Clouds in a trap: shells, temperature, loading.",
+    help=_example(
+        "Example: gutz cloud scans/rubidium-cloud.toml --at depth=14\n\n"
+        "Clouds with the atom numbers and entropy of the file's [trap]: shells, temperature, heating margin.\n\n"
+        "Axes without --at are run through, for example the depth: the loading curve. With --out, figures as well."
+    ),
+)
+@_FILE
+@_SET
+@_AT
+@_out("Write numbers (netCDF) and figures (PNG and PDF) into this folder.")
+@_JSON
+@_QUIET
+@_FORCE
+@_DEBUG
+def cloud(**options: Any) -> int:
+    """Clouds in a trap."""
+    _load_numerics(quiet=options["quiet"])
+    from gutz.commands import cloud as command
+
+    return command.run(**options)
+
+
+@cli.command(
     short_help="Check a file and estimate the work.",
     help=_example(
         "Example: gutz check scans/rubidium-cubic.toml\n\n"

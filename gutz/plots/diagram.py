@@ -21,6 +21,7 @@ from matplotlib.text import Text
 from numpy.typing import NDArray
 
 from gutz import labels, style
+from gutz.boundary import Kind
 from gutz.errors import InputError
 from gutz.phases import Phase, Range, words
 from gutz.plots.canvas import new_figure, settle, styled
@@ -36,12 +37,19 @@ _REACHES = (0, Range.QUASI, Range.SHORT)
 _WORDS = {int(phase) + _REACH * reach: words(phase, reach) for phase in Phase for reach in _REACHES}
 _COLOURS = {int(phase) + _REACH * reach: style.PHASE_COLOURS[phase] for phase in Phase for reach in _REACHES}
 _LEGEND_COLUMNS = 3
+_LINES: dict[Kind, tuple[dict[str, Any], str]] = {
+    Kind.ONSET: ({"lw": 1.2, "ls": "-"}, "line: onset"),
+    Kind.FIRST_ORDER: ({"lw": 2.4, "ls": "-"}, "thick line: first order"),
+    Kind.CROSSOVER: ({"lw": 1.2, "ls": ":"}, "dotted: crossover"),
+    Kind.DIMENSION: ({"lw": 1.2, "ls": "--"}, "dashed: order lost to fluctuations"),
+}
 _NO_LABEL = -99
 
 
-def draw(dataset: xr.Dataset, name: str) -> Figure:
+def draw(dataset: xr.Dataset, name: str, lines: xr.Dataset | None = None) -> Figure:
     """Draw one variable of a scan: a phase diagram, a map or lines, whichever fits its axes.
 
+    lines: boundaries as `gutz.scan.edges.trace` returns them, drawn on top of a map of the same two axes.
     Raises InputError if the dataset has no such variable or no axes.
     """
     axes = [str(axis) for axis in dataset.attrs.get("axes", ())]
@@ -52,7 +60,7 @@ def draw(dataset: xr.Dataset, name: str) -> Figure:
     with styled():
         if len(axes) == 1:
             return _lines(dataset, axes[0], name)
-        return _maps(dataset, axes, name)
+        return _maps(dataset, axes, name, lines)
 
 
 def parameters(
@@ -86,7 +94,7 @@ def parameters(
         return figure
 
 
-def _maps(dataset: xr.Dataset, axes: list[str], name: str) -> Figure:
+def _maps(dataset: xr.Dataset, axes: list[str], name: str, lines: xr.Dataset | None) -> Figure:
     """Panels: one row per component of the variable, one column per value of a third axis."""
     dataset, held = _held(dataset, axes[3:])
     columns = _slices(dataset, axes[2]) if len(axes) > 2 else [(dataset, "")]
@@ -106,6 +114,8 @@ def _maps(dataset: xr.Dataset, axes: list[str], name: str) -> Figure:
             else:
                 drawn.append(_fill_numbers(panel, x, y, values.values, numbers[i]))
             _hatch(panel, x, y, part, axes)
+            if lines is not None and len(axes) == 2:
+                _overlay(panel, lines, axes)
             heading = ", ".join(words for words in (component, where) if words)
             panel.set_title(heading, loc="left", parse_math=False)
             if i == len(rows) - 1:
@@ -116,7 +126,7 @@ def _maps(dataset: xr.Dataset, axes: list[str], name: str) -> Figure:
             bar = figure.colorbar(drawn[-1], ax=list(grid[i]), pad=0.02, aspect=25)
             bar.outline.set_visible(False)
             bar.set_label(_axis_words(dataset, name), parse_math=False)
-    caption = _caption(figure, dataset, held)
+    caption = _caption(figure, dataset, held if lines is None else _line_words(lines))
     if name == "phase":
         _name_regions(figure, grid, columns, axes, caption)
     return figure
@@ -264,6 +274,28 @@ def _cells(values: NDArray[np.float64], at: NDArray[np.float64]) -> NDArray[np.i
     if edges[0] > edges[-1]:
         return values.size - 1 - _cells(values[::-1], at)
     return np.clip(np.searchsorted(edges, at) - 1, 0, values.size - 1)
+
+
+def _overlay(panel: Axes, lines: xr.Dataset, axes: Sequence[str]) -> None:
+    """Draw boundaries piece by piece, each in the line of its kind."""
+    number, kind = lines["curve"].values, lines["kind"].values
+    x, y = lines[axes[0]].values, lines[axes[1]].values
+    for k in np.unique(number):
+        part = np.flatnonzero(number == k)
+        if part.size == 1:
+            panel.plot(x[part], y[part], ".", color=style.INK, ms=3)
+        starts = np.flatnonzero(np.diff(kind[part])) + 1
+        for run in np.split(np.arange(part.size), starts):
+            # Runs of one kind meet halfway, where the kind changes.
+            wide = part[max(run[0] - 1, 0) : run[-1] + 1]
+            look = _LINES[Kind(int(kind[part[run[0]]]))][0]
+            panel.plot(x[wide], y[wide], color=style.INK, solid_capstyle="round", **look)
+
+
+def _line_words(lines: xr.Dataset) -> str:
+    kinds = sorted({int(k) for k in lines["kind"].values})
+    held = ", ".join(f"{name} = {value:.4g}" for name, value in dict(lines.attrs.get("held", {})).items())
+    return ", ".join([held] * bool(held) + [_LINES[Kind(k)][1] for k in kinds])
 
 
 def _regions(part: xr.Dataset) -> xr.DataArray:

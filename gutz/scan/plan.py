@@ -107,6 +107,17 @@ class Plan:
         """
         return _settings(self.spec, self._grids(picked), found)
 
+    def settings_at(self, columns: Sequence[Array]) -> dict[str, Any]:
+        """As `settings`, at single points: one array of values per axis, all of the same length.
+
+        Raises InputError where the lattice or a parameter makes no sense.
+        """
+        grids = list(zip(self.axes, columns, strict=True))
+        found = None
+        if self.spec.lattice is not None:
+            found = hubbard_parameters(_lattice(self.spec.lattice, self.spec.species, grids))
+        return _settings(self.spec, grids, found)
+
     def _grids(self, picked: Sequence[Array]) -> list[tuple[Axis, Array]]:
         count = len(self.axes)
         return [

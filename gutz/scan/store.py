@@ -55,7 +55,7 @@ class Store:
             )
         sweep(folder)
         unfinished = inside(folder, NAME + ".partial")
-        _write_descriptions(unfinished, plan, _provenance(plan, document, tolerances))
+        _write_descriptions(unfinished, plan, provenance(plan, document, tolerances))
         unfinished.rename(path)
         return cls(path, plan)
 
@@ -202,7 +202,7 @@ def _seal(path: Path, attributes: Mapping[str, Any]) -> str:
     return digest.hexdigest()
 
 
-def _provenance(plan: Plan, document: Document, tolerances: Mapping[str, float]) -> dict[str, Any]:
+def provenance(plan: Plan, document: Document, tolerances: Mapping[str, float]) -> dict[str, Any]:
     """Where the numbers come from; no host, no user, no path."""
     spec = plan.spec
     return {
