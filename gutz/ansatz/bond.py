@@ -26,12 +26,18 @@ from gutz.fock import LocalSpace, Matrix, local_space
 
 Array = Any
 
-NODES = ((60.0, 16), (600.0, 24), (6e3, 32), (1e5, 44), (np.inf, 64))
-"""Largest ratio of a site's bandwidth to T, and the number of nodes that keeps the relative error of the bond term
-below 1e-10 up to it (measured in tests/ansatz/test_bond.py)."""
+NODES = (
+    (10.0, 11), (20.0, 13), (40.0, 15), (80.0, 17), (120.0, 18), (200.0, 19), (300.0, 20), (600.0, 23), (1e3, 25),
+    (2e3, 28), (4e3, 31), (1e4, 35), (3e4, 40), (1e5, 45), (1e6, 56), (np.inf, 66),
+)  # fmt: skip
+"""Largest ratio of a site's bandwidth to T, and the number of nodes with which exp(-ωτ) is integrated to a relative
+error below 1e-11 for every ω up to twice the bandwidth (up to 1e7 T; measured)."""
 
-_COLD_DEGENERACY = 1e-7
-_WARM_DEGENERACY = 1e-4
+LINEAR_PART = 0.1
+"""Inverse of the time, in units of 1/bandwidth, up to which nodes are spaced evenly; 0.1 needs fewest (measured)."""
+
+COLD_DEGENERACY = 1e-7
+WARM_DEGENERACY = 1e-4
 _TINY = 1e-12
 
 KINDS = ("full", "pair", "antipair", "normal")
@@ -60,6 +66,11 @@ class Frame:
     combos: np.ndarray
     partner: np.ndarray
     slot: np.ndarray
+
+    def holds(self, name: str) -> bool:
+        """The trial field connects states of one block only."""
+        block = np.repeat(np.arange(len(self.blocks)), self.blocks)
+        return not np.any(self.fields[name][block[:, None] != block])
 
     @property
     def diagonal(self) -> bool:
@@ -182,7 +193,7 @@ def times(beta: Array, bandwidth: Array, nodes: int) -> tuple[Array, Array]:
     x, w = np.polynomial.legendre.leggauss(nodes)
     u, w = 0.5 * (x + 1.0), 0.5 * w
     # τ = (β/2) sinh(c u)/sinh(c): linear at the smallest times, a constant number of nodes per decade beyond.
-    c = jnp.arcsinh(1.0 + 0.5 * beta * bandwidth)[..., None]
+    c = jnp.arcsinh(1.0 + LINEAR_PART * beta * bandwidth)[..., None]
     tau = 0.5 * beta[..., None] * jnp.sinh(c * u) / jnp.sinh(c)
     return tau, 0.5 * beta[..., None] * c * jnp.cosh(c * u) / jnp.sinh(c) * w
 
@@ -299,11 +310,11 @@ def _slope(lv: Levels, ops: Array, k: _Kernel, f: Frame, *, cold: bool) -> Array
     turn = left(g) - right(g)
     gap = lv.energy[..., None, :] - lv.energy[..., :, None]
     if cold:
-        close = jnp.abs(gap) <= _COLD_DEGENERACY * jnp.abs(gap).max((-1, -2), keepdims=True)
+        close = jnp.abs(gap) <= COLD_DEGENERACY * jnp.abs(gap).max((-1, -2), keepdims=True)
         excited = 1.0 - lv.weight
         close = close & (excited[..., :, None] * excited[..., None, :] > 0) | jnp.eye(d, dtype=bool)
     else:
-        close = jnp.abs(gap) * lv.inverse_temperature[..., None, None] <= _WARM_DEGENERACY
+        close = jnp.abs(gap) * lv.inverse_temperature[..., None, None] <= WARM_DEGENERACY
     inside = -0.5 * (left(pull(k.to_late)) + right(pull(k.to_early)))
     inside = 0.5 * (inside + jnp.swapaxes(inside, -1, -2)) + k.to_partition[..., None, :] * jnp.eye(d)
     # Levels apart: the eigenvectors turn by dh_mn/(E_n - E_m). Levels together: exp(-τh) changes as exp(-τE) does.

@@ -10,15 +10,12 @@ has no such part: the functional is even in the twist at any fields.
 
 from typing import Any, NamedTuple
 
-import jax
-import jax.numpy as jnp
 import numpy as np
 
-from gutz.ansatz import bond, dressed, families
+from gutz.ansatz import bond, dressed, evaluate, families
 from gutz.ansatz.dressed import Sites
-from gutz.ansatz.families import Family, Plan
+from gutz.ansatz.families import Family
 from gutz.ansatz.selection import DressedMinimum
-from gutz.compiled import compiled
 from gutz.fock import local_space
 from gutz.model import Mixture
 
@@ -26,6 +23,9 @@ Array = Any
 
 
 _SPIN = len(Family) + 1
+
+_ROUNDING = 1e-13
+"""Gradients closer than this, relative to 1 + |F|, are equal: some hundred times their rounding error."""
 
 
 class DressedObservables(NamedTuple):
@@ -46,40 +46,40 @@ class DressedObservables(NamedTuple):
     stiffness: Array
 
 
-@compiled(static=("plan",))
-def _responses(p: Sites, number: Array, x: Array, lam: Array, along: Array, *, plan: Plan) -> Array:
-    """Second derivatives of F in (directions `along` of the fields, mu, T); along: (n, sublattice, field)."""
-    f = bond.frame(plan.n_max, plan.species, "full")
-    n, a = along.shape[0], plan.species
+def _responses(
+    p: Sites, number: Array, x: Array, lam: Array, along: Array, f: bond.Frame, names: tuple[str, ...], *, cold: bool
+) -> tuple[Array, Array]:
+    """Second derivatives of F in (directions `along` of the fields, mu, T), and the step of the differences.
+
+    along: (n, sublattice, field)."""
+    n, a, sublattices = along.shape[0], len(number), x.shape[1]
+    densities = [names.index(f"nu{i + 1}") for i in range(a)]
 
     def slopes(energy: Array, T: Array, x: Array) -> Array:
-        at = dressed.look(
-            p._replace(energy=energy, T=T), x, lam, f=f, names=plan.names, cold=plan.cold, nodes=plan.nodes
-        )
-        in_mu = -jnp.einsum("...si,ai->...a", at.in_energy, number)
-        fields = jnp.einsum("...sk,nsk->...n", at.gradient, along)
-        return jnp.concatenate([fields, in_mu, at.in_T[:, None]], -1)
+        at = evaluate.look(p._replace(energy=energy, T=T), x, lam, f=f, names=names, cold=cold)
+        # mu and nu enter h alike; nu has an explicit part besides.
+        in_mu = (at.gradient[..., densities] - at.mean[..., densities] / sublattices).sum(1)
+        fields = np.einsum("psk,nsk->pn", at.gradient, along)
+        return np.concatenate([fields, in_mu, at.in_T[:, None]], -1)
 
-    kick = jnp.concatenate([along, jnp.zeros((a + 1, *along.shape[1:]))])
-    unit = np.eye(n + a + 1)
-    in_T = unit[:, -1] * (0.0 if plan.cold else 1.0)
     # Small against T, or against the level spacings.
     width = p.energy.max((-1, -2)) - p.energy.min((-1, -2)) + p.z_t.sum(-1)
-    step = 2e-4 * (0.1 * width if plan.cold else jnp.minimum(0.1 * width, p.T))
-
-    def column(direction: tuple[Array, Array, Array]) -> Array:
-        ex, emu, eT = direction
-
-        def at_step(c: Array) -> Array:
-            e = c * step
-            energy = p.energy - e[:, None, None] * (emu @ number)
-            return slopes(energy, p.T + e * eT, x + e[:, None, None] * ex)
-
-        around = jax.lax.map(at_step, jnp.array([-2.0, -1.0, 1.0, 2.0]))
-        return (around[0] - 8.0 * around[1] + 8.0 * around[2] - around[3]) / (12.0 * step[:, None])
-
-    columns = jax.lax.map(column, (kick, jnp.asarray(unit[:, n : n + a]), jnp.asarray(in_T)))
-    return jnp.moveaxis(columns, 0, -1)
+    step = 1e-4 * (0.1 * width if cold else np.minimum(0.1 * width, p.T))
+    out = np.zeros((len(x), n + a + 1, n + a + 1))
+    for column in range(n + a + (not cold)):
+        around = []
+        for sign in (1.0, -1.0):
+            e = sign * step
+            energy, T, moved = p.energy, p.T, x
+            if column < n:
+                moved = x + e[:, None, None] * along[column]
+            elif column < n + a:
+                energy = p.energy - e[:, None, None] * number[column - n]
+            else:
+                T = p.T + e
+            around.append(slopes(energy, T, moved))
+        out[:, :, column] = (around[0] - around[1]) / (2.0 * step[:, None])
+    return out, step
 
 
 def observables(
@@ -99,14 +99,14 @@ def observables(
         nu = state.fields[..., -2:]
         spin = np.abs(nu[..., 0] - nu[..., 1]).max(-1) > np.abs(nu.sum(-1)).max(-1)
         family = np.where((family == Family.NORMAL) & spin, _SPIN, family)
+    sites = evaluate.numbers(dressed.sites(mixture, mu, T, n_max, sublattices))
     for cold in (False, True):
         for code in np.unique(family):
-            group = np.flatnonzero(((T == 0) == cold) & (family == code))
-            for begin in range(0, group.size, families.CHUNK):
-                index = group[begin : begin + families.CHUNK]
-                part = _chunk(mixture, mu, T, n_max, state, index, int(code), cold)
+            index = np.flatnonzero(((T == 0) == cold) & (family == code))
+            if index.size:
+                part = _group(sites, np.asarray(mixture.t), mu, n_max, state, index, int(code), cold)
                 for whole, piece in zip(out, part, strict=True):
-                    whole[index] = piece[: index.size]
+                    whole[index] = piece
     return out
 
 
@@ -115,64 +115,65 @@ def _shapes(species: int, dim: int) -> list[tuple[int, ...]]:
     return [(), (), (), (species,), pair, pair, (), (species, dim), (*pair, dim)]
 
 
-def _chunk(
-    mixture: Mixture, mu: np.ndarray, T: np.ndarray, n_max: int, state: DressedMinimum,
+def _group(
+    sites: Sites, t: np.ndarray, mu: np.ndarray, n_max: int, state: DressedMinimum,
     index: np.ndarray, code: int, cold: bool,
 ) -> DressedObservables:  # fmt: skip
-    size = max(16, 1 << (index.size - 1).bit_length())
-    at = np.concatenate([index, np.full(size - index.size, index[-1])])
-    m = mixture[at]
-    species = m.species
-    names = dressed.NAMES[species]
-    sublattices = state.fields.shape[1]
+    """Points of one family, or code, see `observables`."""
+    p, t, mu = evaluate.pick(sites, index), t[index], mu[index]
+    T, sublattices, species = p.T, p.energy.shape[1], p.z_t.shape[1]
     family = Family.SINGLE if code == len(Family) else Family(code % _SPIN)
+    f = bond.frame(n_max, species, families.KIND[family])
+    densities = tuple(f"nu{a + 1}" for a in range(species))
+    singles = families.variants(Family.SINGLE, species, sublattices)[0]
+    order = {Family.SINGLE: singles, Family.PAIR: ("K",), Family.ANTIPAIR: ("M",)}.get(family, ())
+    names = (*order, *densities)
+    held = [dressed.NAMES[species].index(name) for name in names]
     used = families.variants(family, species, sublattices)[1 if code == _SPIN else 0]
     along = np.zeros((sublattices, len(used), sublattices, len(names)))
     for site in range(sublattices):
-        along[site, :, site] = [families.spread(name, species) for name in used]
+        along[site, :, site] = [families.spread(name, species)[held] for name in used]
     along = along.reshape(-1, sublattices, len(names))
-    p = dressed.sites(m, jnp.asarray(mu[at]), jnp.asarray(T[at]), n_max, sublattices)
-    energy = np.asarray(p.energy)
-    width = energy.max((-1, -2)) - energy.min((-1, -2)) + 2 * n_max * np.asarray(p.z_t).sum(-1)
-    nodes = 0 if cold else bond.enough_nodes(float((width / T[at]).max()))
-    plan = Plan("full", names, (1.0,), n_max, species, cold, nodes)
-    x, lam = jnp.asarray(state.fields[at]), jnp.asarray(state.lam[at])
-    look = jax.tree_util.tree_map(np.asarray, jax.block_until_ready(families.survey(p, x, lam, plan=plan)))
+    x, lam = np.ascontiguousarray(state.fields[index][..., held]), state.lam[index]
+    look = evaluate.look(p, x, lam, f=f, names=names, cold=cold)
     number = local_space(n_max, species).number
-    second = np.asarray(_responses(p, jnp.asarray(number), x, lam, jnp.asarray(along), plan=plan))
+    second, step = _responses(p, number, x, lam, along, f, names, cold=cold)
 
     F, entropy = look.free_energy, -look.in_T
     # Derivatives in the energy of a basis state are corrected occupations; averages of number operators follow.
     filling = np.einsum("nsi,ai->na", look.in_energy, number)
     squares = np.einsum("nsi,ai,bi->nab", look.in_energy, number, number)
     covariance = squares - filling[:, :, None] * filling[:, None, :]
-    t = np.asarray(m.t)
     condensed = (look.phi * look.phi[:, ::-1]).mean(1)
     hopping = np.einsum("nab,nbd->nad", look.parts.sum(1), t)
-    coherence = condensed[:, :, None] - np.asarray(lam)[:, None, None] * hopping
-    reduced = _relaxed(second, len(along))
-    stiffness = _stiffness(t, look.parts * np.asarray(lam)[:, None, None, None], condensed)
+    coherence = condensed[:, :, None] - lam[:, None, None] * hopping
+    reduced = _relaxed(second, len(along), _ROUNDING * (1.0 + np.abs(F)) / step)
+    stiffness = _stiffness(t, look.parts * lam[:, None, None, None], condensed)
     return DressedObservables(
         F,
         entropy,
-        F + T[at] * entropy + (mu[at] * filling).sum(-1),
+        F + T * entropy + (mu * filling).sum(-1),
         filling,
         covariance,
         -reduced[:, :species, :species],
-        -T[at] * reduced[:, -1, -1],
+        -T * reduced[:, -1, -1],
         coherence,
         stiffness,
     )
 
 
-def _relaxed(second: np.ndarray, n: int) -> np.ndarray:
-    """Second derivatives in (mu, T) after the n fields have followed; flat directions do not move."""
+def _relaxed(second: np.ndarray, n: int, rounding: np.ndarray) -> np.ndarray:
+    """Second derivatives in (mu, T) after the n fields have followed; directions whose curvature is lost in rounding
+    (a Mott plateau) do not move."""
     second = 0.5 * (second + np.swapaxes(second, -1, -2))
     H, mixed, rest = second[:, :n, :n], second[:, :n, n:], second[:, n:, n:]
     if n == 0:
         return rest
     size = np.abs(np.diagonal(H, axis1=-2, axis2=-1))
-    size = np.sqrt(np.where(size > 0, size, 1.0))
+    flat = size <= rounding[:, None]
+    H = np.where(flat[:, :, None] | flat[:, None, :], np.eye(n), H)
+    mixed = np.where(flat[:, :, None], 0.0, mixed)
+    size = np.sqrt(np.where(flat, 1.0, size))
     inverse = np.linalg.pinv(H / size[:, :, None] / size[:, None, :], rcond=1e-9, hermitian=True)
     scaled = mixed / size[:, :, None]
     return rest - np.swapaxes(scaled, -1, -2) @ inverse @ scaled

@@ -18,13 +18,10 @@ Where no family is left, the product minimum is returned with `Status.FALLBACK`.
 from enum import IntEnum
 from typing import Any, NamedTuple
 
-import jax
-import jax.numpy as jnp
 import numpy as np
 
-from gutz.ansatz import bond, dressed
+from gutz.ansatz import bond, dressed, evaluate
 from gutz.ansatz.dressed import Look, Sites
-from gutz.compiled import compiled
 
 Array = Any
 
@@ -53,7 +50,6 @@ pair and anti-pair states this way, since a vanishing field already picks the st
 
 MAX_STEPS = 48
 CHUNK = 1024
-LANES = 128
 STAGES = {Family.SINGLE: (0.25, 0.5, 0.75, 1.0)}
 KIND = {
     Family.NORMAL: "normal",
@@ -64,7 +60,7 @@ KIND = {
 
 
 class Plan(NamedTuple):
-    """What is compiled for: everything but numbers."""
+    """Everything but numbers. nodes: least number of time nodes, more are taken where the temperature asks for them."""
 
     kind: str
     names: tuple[str, ...]
@@ -72,27 +68,19 @@ class Plan(NamedTuple):
     n_max: int
     species: int
     cold: bool
-    nodes: int
+    nodes: int = 0
 
 
 class Reached(NamedTuple):
-    """Per job. x: (job, sublattice, field); free_energy: (job,); converged: bool; steps: int."""
+    """Per job. x, mean (of what the fields couple to): (job, sublattice, field); phi: (job, sublattice, species);
+    free_energy, dressing: (job,); converged: bool; steps: int."""
 
     x: Array
+    mean: Array
+    phi: Array
     free_energy: Array
+    dressing: Array
     converged: Array
-    steps: Array
-
-
-class _Lanes(NamedTuple):
-    job: Array
-    stage: Array
-    x: Array  # where the functional is evaluated next
-    base_x: Array  # the lowest point of this stage
-    base_F: Array
-    base_g: Array
-    hessian: Array
-    radius: Array  # longest step, relative to the size of the fields
     steps: Array
 
 
@@ -127,201 +115,216 @@ def makes_order(name: str) -> bool:
     return name[0] in "JKM"
 
 
-@compiled(static=("plan", "lanes"))
-def descend(p: Sites, point: Array, start: Array, scale: Array, count: Array, *, plan: Plan, lanes: int) -> Reached:
-    """Minimise from every start in a queue of jobs, stage by stage in λ; lanes that are done take the next job.
+def descend(p: Sites, point: Array, start: Array, scale: Array, *, plan: Plan) -> Reached:
+    """Minimise from every start, stage by stage in λ; jobs that are done drop out.
 
     point: index into p of each job, (job,). start: (job, sublattice, field); a single-particle, pair or anti-pair
-    field that starts at exactly 0 stays 0. scale: natural size of each field of each job, same shape. count: jobs in
-    use. Quasi-Newton steps (damped BFGS from the mean-field curvature), limited in length, never uphill.
+    field that starts at exactly 0 stays 0. scale: natural size of each field of each job, same shape.
+    Quasi-Newton steps (damped BFGS from the mean-field curvature), limited in length, never uphill.
     """
     f = bond.frame(plan.n_max, plan.species, plan.kind)
     jobs, sublattices, k = start.shape
     n = sublattices * k
-    stages = jnp.asarray(plan.stages)
+    p = evaluate.pick(evaluate.numbers(p), np.asarray(point))
+    size = np.asarray(scale, float).reshape(jobs, n)
     may_start = np.tile([makes_order(name) for name in plan.names], sublattices)
+    x = np.array(start, float).reshape(jobs, n)
+    nothing = np.zeros(jobs)
+    out = Reached(
+        x.reshape(start.shape).copy(), np.zeros(start.shape), np.zeros((jobs, sublattices, plan.species)),
+        nothing + np.inf, nothing.copy(), nothing > 0, nothing.astype(int),
+    )  # fmt: skip
+    job = _Jobs(np.arange(jobs), x, ~(may_start & (x == 0.0)), p, size, plan)
+    while job.index.size:
+        lam = np.asarray(plan.stages)[job.stage]
+        at = evaluate.look(
+            job.sites, job.x.reshape(-1, sublattices, k), lam, f=f, names=plan.names, cold=plan.cold,
+            parameters=False, nodes=plan.nodes,
+        )  # fmt: skip
+        finished, accepted = job.step(at, plan)
+        if finished.any():
+            done = job.index[finished]
+            found = (
+                job.base_x.reshape(-1, sublattices, k), job.base_mean, job.base_phi, job.base_F, job.base_dressing,
+                accepted, job.steps,
+            )  # fmt: skip
+            for whole, piece in zip(out, found, strict=True):
+                whole[done] = piece[finished]
+            job.keep(~finished)
+    return out
 
-    def load(job: Array) -> tuple[Sites, Array, Array]:
-        safe = jnp.minimum(job, jobs - 1)
-        i = point[safe]
-        return Sites(*(v[i] for v in p)), start[safe].reshape(-1, n), scale[safe].reshape(-1, n)
 
-    def fresh(job: Array, x: Array) -> _Lanes:
-        size = job.shape[0]
-        return _Lanes(
-            job,
-            jnp.zeros(size, jnp.int32),
-            x,
-            x,
-            jnp.full(size, jnp.inf),
-            jnp.zeros_like(x),
-            jnp.broadcast_to(jnp.eye(n), (size, n, n)),
-            jnp.full(size, 0.5),
-            jnp.zeros(size, jnp.int32),
-        )
+class _Jobs:
+    """The minimisations under way, one row each. x: where the functional is looked at next. base_x, base_F, and so on:
+    the lowest point of this stage. radius: longest step, relative to the size of the fields."""
 
-    def body(carry: tuple[_Lanes, Array, Reached]) -> tuple[_Lanes, Array, Reached]:
-        lane, head, out = carry
-        here, x0, size = load(lane.job)
-        free = ~(may_start & (x0 == 0.0))
-        lam = stages[lane.stage]
-        at = dressed.look(
-            here, lane.x.reshape(-1, sublattices, k), lam, f=f, names=plan.names, cold=plan.cold, nodes=plan.nodes
-        )
-        F, g = at.free_energy, jnp.where(free, at.gradient.reshape(-1, n), 0.0)
-        good = jnp.isfinite(F) & jnp.isfinite(g).all(-1)
-        first = jnp.isinf(lane.base_F)
-        ok = good & (first | (F <= lane.base_F + 1e-14 * (1.0 + jnp.abs(F))))
+    def __init__(self, index: Array, x: Array, free: Array, sites: Sites, size: Array, plan: Plan) -> None:
+        jobs, n = x.shape
+        self.index, self.x, self.free, self.sites, self.size = index, x, free, sites, size
+        self.stage, self.steps = np.zeros(jobs, int), np.zeros(jobs, int)
+        self.base_x, self.base_F, self.base_g = x.copy(), np.full(jobs, np.inf), np.zeros((jobs, n))
+        shape = (jobs, sites.energy.shape[1])
+        self.base_mean, self.base_phi = np.zeros((*shape, len(plan.names))), np.zeros((*shape, plan.species))
+        self.base_dressing = np.zeros(jobs)
+        self.hessian, self.radius = np.broadcast_to(np.eye(n), (jobs, n, n)).copy(), np.full(jobs, 0.5)
 
-        model = _model_hessian(here, at.response, plan.names)
-        updated = _bfgs(lane.hessian, lane.x - lane.base_x, g - lane.base_g)
-        begin = first & (lane.stage == 0)
-        B = jnp.where(first[:, None, None], lane.hessian, jnp.where(good[:, None, None], updated, lane.hessian))
-        B = jnp.where(begin[:, None, None], model, B)
-        both = free[:, :, None] & free[:, None, :]
-        B = jnp.where(both, B, jnp.eye(n))
-        curvature, axes = jnp.linalg.eigh(jnp.where(jnp.isfinite(B), B, jnp.eye(n)))
-        # A direction whose curvature is lost in rounding (a Mott plateau) is flat: do not run along it.
-        lost = 1e-12 * (1.0 + jnp.abs(F))[:, None] / (size**2).min(-1, keepdims=True)
-        floor = jnp.maximum(1e-6 * jnp.abs(curvature).max(-1, keepdims=True), jnp.where(good[:, None], lost, 1.0))
-        curvature = jnp.maximum(jnp.abs(curvature), floor)
-        B = (axes * curvature[:, None, :]) @ jnp.swapaxes(axes, -1, -2)
+    def keep(self, which: Array) -> None:
+        """Forget the others."""
+        for name, value in vars(self).items():
+            setattr(self, name, evaluate.pick(value, which) if name == "sites" else value[which])
 
-        base_x = jnp.where(ok[:, None], lane.x, lane.base_x)
-        base_F = jnp.where(ok, F, lane.base_F)
-        base_g = jnp.where(ok[:, None], g, lane.base_g)
+    def step(self, at: Look, plan: Plan) -> tuple[Array, Array]:
+        """Take in one look and choose the next place; returns which jobs are finished and which of them converged."""
+        n = self.x.shape[1]
+        F, g = at.free_energy, np.where(self.free, at.gradient.reshape(-1, n), 0.0)
+        good = np.isfinite(F) & np.isfinite(g).all(-1)
+        first = np.isinf(self.base_F)
+        ok = good & (first | (F <= self.base_F + 1e-14 * (1.0 + np.abs(F))))
+        curvature, axes = self._curvature(at, g, F, good, first, plan.names)
+        base_x = np.where(ok[:, None], self.x, self.base_x)
+        base_F = np.where(ok, F, self.base_F)
+        base_g = np.where(ok[:, None], g, self.base_g)
+        self.base_mean = np.where(ok[:, None, None], at.mean, self.base_mean)
+        self.base_phi = np.where(ok[:, None, None], at.phi, self.base_phi)
+        self.base_dressing = np.where(ok, dressing(at), self.base_dressing)
         along = (base_g[:, None, :] @ axes)[:, 0, :] / curvature
         step = -(axes @ along[:, :, None])[:, :, 0]
         predicted = -0.5 * (step * base_g).sum(-1)
-        moved = (jnp.abs(lane.x - lane.base_x) / (jnp.abs(lane.base_x) + size)).max(-1)
-        radius = jnp.where(ok, jnp.minimum(1.0, 2.0 * lane.radius), 0.25 * jnp.minimum(moved, lane.radius))
-        wanted = (jnp.abs(step) / (jnp.abs(base_x) + size)).max(-1)
-        step = step * jnp.minimum(1.0, radius / jnp.maximum(wanted, 1e-300))[:, None]
+        moved = (np.abs(self.x - self.base_x) / (np.abs(self.base_x) + self.size)).max(-1)
+        radius = np.where(ok, np.minimum(1.0, 2.0 * self.radius), 0.25 * np.minimum(moved, self.radius))
+        wanted = (np.abs(step) / (np.abs(base_x) + self.size)).max(-1)
+        step = step * np.minimum(1.0, radius / np.maximum(wanted, 1e-300))[:, None]
 
-        last = lane.stage == len(plan.stages) - 1
-        tight = (predicted <= 1e-16 * (1.0 + jnp.abs(base_F))) | (wanted <= 1e-9)
-        settled = jnp.where(last, tight, wanted <= 1e-2) | (radius < 1e-9)
-        settled = settled & jnp.isfinite(base_F)
+        last = self.stage == len(plan.stages) - 1
+        tight = (predicted <= 1e-16 * (1.0 + np.abs(base_F))) | (wanted <= 1e-9)
+        settled = np.where(last, tight, wanted <= 1e-2) | (radius < 1e-9)
+        settled &= np.isfinite(base_F)
         # Far outside the range of a second-order step there is no state to look for.
         lost_it = at.bond**2 > (4.0 * DRESSING_LIMIT) ** 2 * at.variance
-        finished = (settled & last) | (lane.steps >= MAX_STEPS) | ~jnp.isfinite(base_F) | lost_it
-        accepted = ~lost_it & (settled & last) | (
-            ~lost_it & jnp.isfinite(base_F) & last & (predicted <= 1e-12 * (1.0 + jnp.abs(base_F)))
-        )
-        where = jnp.where(finished & (lane.job < count), lane.job, jobs)
-        result = Reached(base_x.reshape(-1, sublattices, k), base_F, accepted, lane.steps)
-        out = Reached(*(o.at[where].set(v, mode="drop") for o, v in zip(out, result, strict=True)))
+        finished = (settled & last) | (self.steps >= MAX_STEPS) | ~np.isfinite(base_F) | lost_it
+        nearly = np.isfinite(base_F) & last & (predicted <= 1e-12 * (1.0 + np.abs(base_F)))
+        accepted = ~lost_it & ((settled & last) | nearly)
 
         advance = settled & ~last
-        going = _Lanes(
-            lane.job,
-            lane.stage + advance,
-            jnp.where(advance[:, None], base_x, base_x + step),
-            base_x,
-            jnp.where(advance, jnp.inf, base_F),
-            base_g,
-            B,
-            jnp.where(advance, 0.5, radius),
-            lane.steps + 1,
-        )
-        rank = jnp.cumsum(finished) - 1
-        job = jnp.where(finished, jnp.minimum(head + rank, jobs), lane.job)
-        replaced = fresh(job, load(job)[1])
+        self.stage += advance
+        self.x = np.where(advance[:, None], base_x, base_x + step)
+        self.base_x, self.base_g, self.base_F = base_x, base_g, np.where(advance & ~finished, np.inf, base_F)
+        self.radius = np.where(advance, 0.5, radius)
+        self.steps += ~finished
+        return finished, accepted
 
-        def pick(new: Array, old: Array) -> Array:
-            return jnp.where(finished.reshape((-1,) + (1,) * (old.ndim - 1)), new, old)
+    def _curvature(
+        self, at: Look, g: Array, F: Array, good: Array, first: Array, names: tuple[str, ...]
+    ) -> tuple[Array, Array]:
+        """Update the Hessian; returns its eigenvalues, made positive, and axes."""
+        n = self.x.shape[1]
+        updated = _bfgs(self.hessian, self.x - self.base_x, g - self.base_g)
+        B = np.where((good & ~first)[:, None, None], updated, self.hessian)
+        begin = first & (self.stage == 0)
+        if begin.any():
+            B = np.where(begin[:, None, None], _model_hessian(self.sites, at.response, names), B)
+        B = np.where(self.free[:, :, None] & self.free[:, None, :], B, np.eye(n))
+        curvature, axes = np.linalg.eigh(np.where(np.isfinite(B), B, np.eye(n)))
+        # A direction whose curvature is lost in rounding (a Mott plateau) is flat: do not run along it.
+        lost = 1e-12 * (1.0 + np.abs(F))[:, None] / (self.size**2).min(-1, keepdims=True)
+        floor = np.maximum(1e-6 * np.abs(curvature).max(-1, keepdims=True), np.where(good[:, None], lost, 1.0))
+        curvature = np.maximum(np.abs(curvature), floor)
+        self.hessian = (axes * curvature[:, None, :]) @ np.swapaxes(axes, -1, -2)
+        return curvature, axes
 
-        return _Lanes(*(pick(a, b) for a, b in zip(replaced, going, strict=True))), head + finished.sum(), out
 
-    def unfinished(carry: tuple[_Lanes, Array, Reached]) -> Array:
-        return jnp.any(carry[0].job < count)
+def _hopping(p: Sites, names: tuple[str, ...], sublattices: int) -> Array:
+    """What couples the fields J of neighbours in the first-order functional, (point, n, n)."""
+    k = len(names)
+    D = np.zeros((len(p.T), sublattices * k, sublattices * k))
+    for s in range(sublattices):
+        for i, name in enumerate(names):
+            if name.startswith("J"):
+                D[:, s * k + i, (sublattices - 1 - s) * k + i] = 0.5 * p.z_t[:, int(name[1]) - 1]
+    return D
 
-    line = jnp.arange(lanes)
-    begin = fresh(line, load(line)[1])
-    empty = Reached(start, jnp.full(jobs, jnp.inf), jnp.zeros(jobs, bool), jnp.zeros(jobs, jnp.int32))
-    return jax.lax.while_loop(unfinished, body, (begin, jnp.asarray(lanes), empty))[2]
+
+def _on_diagonal(blocks: Array) -> Array:
+    """One matrix from those of the sublattices, (point, sublattice, k, k) to (point, n, n)."""
+    points, sublattices, k = blocks.shape[:3]
+    X = np.zeros((points, sublattices * k, sublattices * k))
+    for s in range(sublattices):
+        X[:, s * k : (s + 1) * k, s * k : (s + 1) * k] = blocks[:, s]
+    return X
 
 
 def _model_hessian(p: Sites, response: Array, names: tuple[str, ...]) -> Array:
-    """Curvature of the first-order functional: X - X D X, with D the hopping between the fields J; (..., n, n)."""
-    sublattices, k = response.shape[-3], response.shape[-1]
-    n = sublattices * k
-    X = jnp.zeros((*response.shape[:-3], n, n))
-    D = jnp.zeros_like(X)
-    for s in range(sublattices):
-        X = X.at[..., s * k : (s + 1) * k, s * k : (s + 1) * k].set(response[..., s, :, :])
-        for i, name in enumerate(names):
-            if name.startswith("J"):
-                partner = (sublattices - 1 - s) * k + i
-                D = D.at[..., s * k + i, partner].set(0.5 * p.z_t[..., int(name[1]) - 1])
-    return (X - X @ D @ X) / sublattices
+    """Curvature of the first-order functional: X - X D X, with D the hopping between the fields J; (point, n, n)."""
+    sublattices = response.shape[1]
+    X = _on_diagonal(response)
+    return (X - X @ _hopping(p, names, sublattices) @ X) / sublattices
 
 
 def _bfgs(B: Array, s: Array, y: Array) -> Array:
     """Damped update (Powell 1978): stays positive definite whatever the curvature along s."""
     Bs = (B @ s[..., None])[..., 0]
     sBs, sy = (s * Bs).sum(-1), (s * y).sum(-1)
-    theta = jnp.where(sy >= 0.1 * sBs, 1.0, 0.9 * sBs / jnp.where(sBs == sy, 1.0, sBs - sy))[..., None]
+    theta = np.where(sy >= 0.1 * sBs, 1.0, 0.9 * sBs / np.where(sBs == sy, 1.0, sBs - sy))[..., None]
     r = theta * y + (1.0 - theta) * Bs
     sr = (s * r).sum(-1)
     usable = (sBs > 1e-280) & (sr > 1e-280)
-    change = r[..., :, None] * r[..., None, :] / jnp.where(usable, sr, 1.0)[..., None, None]
-    change = change - Bs[..., :, None] * Bs[..., None, :] / jnp.where(usable, sBs, 1.0)[..., None, None]
-    return jnp.where(usable[..., None, None], B + change, B)
+    change = r[..., :, None] * r[..., None, :] / np.where(usable, sr, 1.0)[..., None, None]
+    change = change - Bs[..., :, None] * Bs[..., None, :] / np.where(usable, sBs, 1.0)[..., None, None]
+    return np.where(usable[..., None, None], B + change, B)
 
 
-@compiled(static=("plan",))
 def survey(p: Sites, x: Array, lam: Array, *, plan: Plan) -> Look:
-    """One evaluation of the functional at given fields (all of `dressed.NAMES`, any kind)."""
+    """One evaluation of the functional at given fields (those in plan.names)."""
     f = bond.frame(plan.n_max, plan.species, plan.kind)
-    return dressed.look(p, x, lam, f=f, names=plan.names, cold=plan.cold, nodes=plan.nodes)
+    return evaluate.look(
+        evaluate.numbers(p), np.asarray(x, float), np.asarray(lam, float), f=f, names=plan.names, cold=plan.cold,
+        nodes=plan.nodes,
+    )  # fmt: skip
+
+
+def dressing(look: Look) -> Array:
+    """|F_bond| / sqrt<V²> on a bond, (point,)."""
+    root = np.sqrt(np.where(look.variance > 0, look.variance, 1.0))
+    return np.where(look.variance > 0, -look.bond / root, 0.0)
 
 
 class Onset(NamedTuple):
     """Smallest curvature in the single-particle fields, relative to free response: 0 at the onset, < 0 unstable.
 
-    dressed: at the λ given, product: at λ = 0; shape (...).
+    dressed: at the λ given, product: at λ = 0; shape (point,).
     """
 
     dressed: Array
     product: Array
 
 
-@compiled(static=("plan",))
 def onset(p: Sites, x: Array, lam: Array, *, plan: Plan) -> Onset:
     """Curvature in (J_1, J_2) of every sublattice at fixed other fields, both relative signs included.
 
-    x: fields without single-particle part, (..., sublattice, field) in the order of `dressed.NAMES`.
+    x: fields without single-particle part, (point, sublattice, field) in the order of `dressed.NAMES`.
     The gradient is odd in J, so one small step gives the second derivative to second order in the step.
     """
     f = bond.frame(plan.n_max, plan.species, "full")
     names = dressed.NAMES[plan.species]
+    p, x, lam = evaluate.numbers(p), np.asarray(x, float), np.asarray(lam, float)
     sublattices, species = x.shape[-2], plan.species
-    step = 1e-4 * (p.z_t.max(-1) if plan.cold else jnp.minimum(p.z_t.max(-1), 10.0 * p.T))
-    step = jnp.where(step > 0, step, 1e-4)
-    # All directions in one batch, so that only one eigensolver call runs (see `bond.eigensystem`).
+    step = 1e-4 * (p.z_t.max(-1) if plan.cold else np.minimum(p.z_t.max(-1), 10.0 * p.T))
+    step = np.where(step > 0, step, 1e-4)
     n = sublattices * species
-    kick = np.zeros((n, sublattices, len(names)))
+    H, X = np.empty((len(x), n, n)), np.empty(0)
     for column in range(n):
-        kick[column, column // species, column % species] = 1.0
-    moved = x + step[:, None, None] * jnp.asarray(kick)[:, None]
-    many = Sites(*(jnp.tile(v, (n,) + (1,) * (v.ndim - 1)) for v in p))
-    at = dressed.look(
-        many, moved.reshape(-1, *x.shape[1:]), jnp.tile(lam, n), f=f, names=names, cold=plan.cold, nodes=plan.nodes
-    )
-    at = jax.tree_util.tree_map(lambda v: v.reshape(n, -1, *v.shape[1:]), at)
-    H = jnp.moveaxis(at.gradient[..., :species].reshape(n, -1, n) / step[:, None], 0, -1)
-    H = 0.5 * (H + jnp.swapaxes(H, -1, -2)) * sublattices
-    chi = at.response[0, ..., :species, :species]
-    X = jnp.zeros_like(H)
-    D = jnp.zeros_like(H)
-    for s in range(sublattices):
-        X = X.at[..., s * species : (s + 1) * species, s * species : (s + 1) * species].set(chi[..., s, :, :])
-        for a in range(species):
-            D = D.at[..., s * species + a, (sublattices - 1 - s) * species + a].set(0.5 * p.z_t[..., a])
-    root = jnp.linalg.cholesky(X)
-    left = jax.scipy.linalg.solve_triangular(root, H, lower=True)
-    scaled = jax.scipy.linalg.solve_triangular(root, jnp.swapaxes(left, -1, -2), lower=True)
-    bare = jnp.eye(n) - jnp.swapaxes(root, -1, -2) @ D @ root
-    both = jnp.linalg.eigvalsh(jnp.stack([scaled, bare]))[..., 0]
+        moved = x.copy()
+        moved[:, column // species, column % species] += step
+        at = evaluate.look(p, moved, lam, f=f, names=names, cold=plan.cold, parameters=False, nodes=plan.nodes)
+        H[:, :, column] = at.gradient[..., :species].reshape(-1, n) / step[:, None]
+        if column == 0:
+            X = _on_diagonal(at.response[..., :species, :species])
+    H = 0.5 * (H + np.swapaxes(H, -1, -2)) * sublattices
+    D = _hopping(p, names[:species], sublattices)
+    size, axes = np.linalg.eigh(X)
+    size = np.sqrt(np.maximum(size, 1e-300))[:, None, :]
+    turned = np.swapaxes(axes, -1, -2)
+    scaled = (turned @ H @ axes) / size / np.swapaxes(size, -1, -2)
+    bare = np.eye(n) - (turned @ D @ axes) * size * np.swapaxes(size, -1, -2)
+    both = np.linalg.eigvalsh(np.stack([scaled, bare]))[..., 0]
     return Onset(both[0], both[1])

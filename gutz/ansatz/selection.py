@@ -7,13 +7,11 @@ The rules of acceptance are those at the top of `gutz.ansatz.families`.
 
 from typing import Any, NamedTuple
 
-import jax
-import jax.numpy as jnp
 import numpy as np
 
-from gutz.ansatz import bond, descent, dressed, families, product
+from gutz.ansatz import bond, descent, dressed, evaluate, families, product
 from gutz.ansatz.dressed import Look, Sites
-from gutz.ansatz.families import Family, Plan, Reached
+from gutz.ansatz.families import Family, Plan
 from gutz.model import Mixture
 from gutz.status import Status
 
@@ -38,7 +36,8 @@ class DressedMinimum(NamedTuple):
     product state. status: bits of `Status`. dressing: |F_bond| / sqrt<V²>. softness: curvature in the
     single-particle fields relative to free response, > 0 in a stable state without single-particle order, 0 where there
     is such order. phi, filling: (N, sublattice, species). pair, antipair: <b_1 b_2>, <b_1† b_2>, (N, sublattice).
-    energies: free energy of each family where it is acceptable, else inf, (N, 4).
+    energies: free energy of each family, inf where it was found not to be acceptable, (N, 4); stability against
+    single-particle order is asked of those only that would win.
     """
 
     family: Array
@@ -63,102 +62,86 @@ def minimise(
     mu: (N, species). T: (N,). product_x: order parameters at the product minimum, (N, sublattice, species).
     """
     mu, T = np.asarray(mu, float), np.asarray(T, float)
+    sites = evaluate.numbers(dressed.sites(mixture, mu, T, n_max, sublattices))
+    exchange = _exchange(mixture, sites.z_t)
+    x = _product(sites, n_max) if product_x is None else np.asarray(product_x, float)
     out: DressedMinimum | None = None
     for cold in (False, True):
-        group = np.flatnonzero((T == 0) == cold)
-        for begin in range(0, group.size, families.CHUNK):
-            index = group[begin : begin + families.CHUNK]
-            # Padding repeats the last point, so that few shapes are compiled.
-            padded = np.concatenate([index, np.full(_room(index.size) - index.size, index[-1])])
-            x = None if product_x is None else np.asarray(product_x)[padded]
-            part = _Points(mixture[padded], mu[padded], T[padded], n_max, sublattices, cold).solve(x)
-            if out is None:
-                out = DressedMinimum(*(np.zeros((T.size, *v.shape[1:]), v.dtype) for v in part))
-            for whole, piece in zip(out, part, strict=True):
-                whole[index] = piece[: index.size]
+        index = np.flatnonzero((T == 0) == cold)
+        if not index.size:
+            continue
+        part = _Points(evaluate.pick(sites, index), exchange[index], n_max, cold).solve(x[index])
+        if out is None:
+            out = DressedMinimum(*(np.zeros((T.size, *v.shape[1:]), v.dtype) for v in part))
+        for whole, piece in zip(out, part, strict=True):
+            whole[index] = piece
     if out is None:
         raise ValueError("no points")
     return out
 
 
-def _room(size: int) -> int:
-    return max(16, 1 << (size - 1).bit_length())
+def _product(p: Sites, n_max: int) -> np.ndarray:
+    """Order parameters at the product minimum, padded so that few shapes are compiled."""
+    size, room = p.T.size, max(16, 1 << (p.T.size - 1).bit_length())
+    at = np.minimum(np.arange(room), size - 1)
+    start = np.full((room, p.energy.shape[1], p.z_t.shape[1]), 0.7)
+    found = descent.descend(
+        product.Sites(p.energy[at], p.z_t[at], p.T[at]), np.arange(room), start, np.asarray(size),
+        n_max=n_max, lanes=min(64, room),
+    )  # fmt: skip
+    x = np.asarray(found.x)[:size]
+    return np.where(np.abs(x) > families.ORDER_FLOOR, x, 0.0)
+
+
+class _State(NamedTuple):
+    """A family at every point. fields: in the order of `dressed.NAMES`; ok: nothing speaks against it yet."""
+
+    fields: np.ndarray
+    ok: np.ndarray
+    free_energy: np.ndarray
+    dressing: np.ndarray
 
 
 class _Points:
-    """The points of one compiled shape: all at T = 0 (`cold`) or all at T > 0."""
+    """Points that are all at T = 0 (`cold`) or all at T > 0."""
 
-    def __init__(
-        self, mixture: Mixture, mu: np.ndarray, T: np.ndarray, n_max: int, sublattices: int, cold: bool
-    ) -> None:
-        self.species, self.sublattices, self.n_max, self.cold = mixture.species, sublattices, n_max, cold
+    def __init__(self, sites: Sites, exchange: np.ndarray, n_max: int, cold: bool) -> None:
+        self.sites, self.exchange, self.n_max, self.cold = sites, exchange, n_max, cold
+        self.size, self.sublattices = sites.energy.shape[:2]
+        self.species = sites.z_t.shape[1]
         self.names = dressed.NAMES[self.species]
-        self.size = T.size
-        self.sites = dressed.sites(mixture, jnp.asarray(mu), jnp.asarray(T), n_max, sublattices)
-        self.z_t = np.asarray(self.sites.z_t)
-        self.exchange = _exchange(mixture, self.z_t)
-        self.T = T
-        self.slow_T = np.maximum(T, _COLDEST * self.exchange)
-        energy = np.asarray(self.sites.energy)
-        self.width = energy.max((-1, -2)) - energy.min((-1, -2)) + 2 * n_max * self.z_t.sum(-1)
-        self.ordinary = _plan_nodes(self.width, T)
+        self.slow_T = np.maximum(sites.T, _COLDEST * exchange)
 
-    def solve(self, x: np.ndarray | None) -> DressedMinimum:
+    def solve(self, x: np.ndarray) -> DressedMinimum:
         """Minimise every family and pick."""
-        x = self._product() if x is None else x
-        states: dict[Family, tuple[np.ndarray, np.ndarray, Look, np.ndarray]] = {}
-        single, ok = self._single(x)
-        collapsed = ok.copy()
-        look = self._survey(single, np.ones(self.size))
-        ordered = np.abs(np.asarray(look.phi)).max((-1, -2)) > families.SINGLE_FLOOR
-        collapsed &= ~ordered
-        states[Family.SINGLE] = (single, ok & ordered, look, np.zeros(self.size))
+        single, collapsed = self._single(x)
+        states = {Family.SINGLE: single, Family.NORMAL: self._without_singles(Family.NORMAL)}
+        if self.species == 2:
+            states[Family.PAIR] = self._without_singles(Family.PAIR)
+            states[Family.ANTIPAIR] = self._without_singles(Family.ANTIPAIR)
+        return self._pick(states, collapsed, x)
 
-        kinds = [Family.NORMAL] if self.species == 1 else [Family.NORMAL, Family.PAIR, Family.ANTIPAIR]
-        for family in kinds:
-            fields, ok, look = self._without_singles(family)
-            stable = jax.block_until_ready(
-                families.onset(self.sites, jnp.asarray(fields), jnp.ones(self.size), plan=self._full())
-            )
-            soft = np.asarray(stable.dressed)
-            ok = ok & (soft > 0)
-            if family is Family.NORMAL:
-                ok &= (np.asarray(stable.product) > 0) | collapsed
-            else:
-                column = 2 if family is Family.PAIR else 3
-                ok &= np.abs(np.asarray(look.mean)[..., column]).max(-1) > families.ORDER_FLOOR
-            states[family] = (fields, ok, look, soft)
-        return self._pick(states, x)
-
-    def _pick(
-        self, states: dict[Family, tuple[np.ndarray, np.ndarray, Look, np.ndarray]], x: np.ndarray
-    ) -> DressedMinimum:
+    def _pick(self, states: dict[Family, _State], collapsed: np.ndarray, x: np.ndarray) -> DressedMinimum:
         energies = np.full((self.size, len(Family)), np.inf)
-        shape = (self.size, self.sublattices, len(self.names))
-        fields = np.zeros((len(Family) + 1, *shape))
-        soft = np.zeros((len(Family) + 1, self.size))
-        for family, (field, ok, look, softness) in states.items():
-            F = np.asarray(look.free_energy)
-            ok = ok & np.isfinite(F) & (_dressing(look) <= families.DRESSING_LIMIT)
-            energies[:, family] = np.where(ok, F, np.inf)
-            fields[family], soft[family] = field, softness
-        fallback = ~np.isfinite(energies).any(-1)
-        fields[-1, ..., : self.species] = self.z_t[:, None, :] * x[:, ::-1, :]
-        best = energies.min(-1, keepdims=True)
-        slack = _PREFERENCE * (1.0 + np.abs(np.where(np.isfinite(best), best, 0.0)))
-        order = np.argmax(energies <= best + slack, axis=-1)
-        row = np.where(fallback, len(Family), order)
+        fields = np.zeros((len(Family) + 1, self.size, self.sublattices, len(self.names)))
+        for family, state in states.items():
+            ok = state.ok & np.isfinite(state.free_energy) & (state.dressing <= families.DRESSING_LIMIT)
+            energies[:, family] = np.where(ok, state.free_energy, np.inf)
+            fields[family] = state.fields
+        fields[-1, ..., : self.species] = self.sites.z_t[:, None, :] * x[:, ::-1, :]
+        row, soft = self._stable(energies, fields, collapsed)
+        fallback = row == len(Family)
         chosen = np.take_along_axis(fields, row[None, :, None, None], 0)[0]
         lam = np.where(fallback, 0.0, 1.0)
-        look = self._survey(chosen, lam)
-        phi = np.asarray(look.phi)
+        look = survey(self.sites, chosen, lam, np.where(fallback, Family.SINGLE, row), self.n_max, cold=self.cold)
+        phi = look.phi
         # Minus the derivative in a uniform source of Q: the trial average, corrected where the family left this field
         # out. (A staggered source on a number that does not fluctuate has no meaning, see `families.variants`.)
-        mean = np.asarray(look.mean) - np.asarray(look.gradient).sum(1, keepdims=True)
-        dressing = _dressing(look)
+        mean = look.mean - look.gradient.sum(1, keepdims=True)
+        dressing = families.dressing(look)
         has_order = np.abs(phi).max((-1, -2)) > families.ORDER_FLOOR
-        family_code = np.where(fallback, np.where(has_order, Family.SINGLE, Family.NORMAL), order)
-        F = np.asarray(look.free_energy)
+        family_code = np.where(fallback, np.where(has_order, Family.SINGLE, Family.NORMAL), row)
+        F = look.free_energy
         status = np.where(fallback, int(Status.FALLBACK), 0)
         status |= np.where(dressing > families.DRESSING_LARGE, int(Status.DRESSING_LARGE), 0)
         status |= np.where(np.isfinite(F), 0, int(Status.NOT_FINITE))
@@ -171,7 +154,7 @@ class _Points:
             F,
             status.astype(np.int32),
             dressing,
-            np.take_along_axis(soft, row[None], 0)[0],
+            soft,
             np.where(np.abs(phi) > families.ORDER_FLOOR, phi, 0.0),
             0.5 * mean[..., 2] if two else zero,
             0.5 * mean[..., 3] if two else zero,
@@ -179,65 +162,90 @@ class _Points:
             energies,
         )
 
-    def _full(self) -> Plan:
-        return Plan("full", self.names, (1.0,), self.n_max, self.species, self.cold, self.ordinary)
+    def _stable(self, energies: np.ndarray, fields: np.ndarray, collapsed: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """The lowest family of each point that is stable against single-particle order, len(Family) for none, and its
+        softness. Only those that would win are examined; unstable ones get the energy inf."""
+        plan = Plan("full", self.names, (1.0,), self.n_max, self.species, self.cold)
+        row, soft = np.full(self.size, len(Family)), np.zeros(self.size)
+        todo = np.arange(self.size)
+        while todo.size:
+            best = energies[todo].min(-1, keepdims=True)
+            slack = _PREFERENCE * (1.0 + np.abs(np.where(np.isfinite(best), best, 0.0)))
+            first = np.argmax(energies[todo] <= best + slack, axis=-1)
+            settled = ~np.isfinite(best[:, 0]) | (first == Family.SINGLE)
+            row[todo[settled]] = np.where(np.isfinite(best[settled, 0]), first[settled], len(Family))
+            todo, first = todo[~settled], first[~settled]
+            if not todo.size:
+                break
+            found = families.onset(evaluate.pick(self.sites, todo), fields[first, todo], np.ones(todo.size), plan=plan)
+            normal = first == Family.NORMAL
+            ok = (found.dressed > 0) & (~normal | (found.product > 0) | collapsed[todo])
+            row[todo[ok]], soft[todo[ok]] = first[ok], found.dressed[ok]
+            energies[todo[~ok], first[~ok]] = np.inf
+            todo = todo[~ok]
+        return row, soft
 
-    def _survey(self, fields: np.ndarray, lam: np.ndarray) -> Look:
-        # Waiting keeps eigensolver calls of different programs from running at the same time.
-        return jax.block_until_ready(
-            families.survey(self.sites, jnp.asarray(fields), jnp.asarray(lam), plan=self._full())
-        )
-
-    def _product(self) -> np.ndarray:
-        p = product.Sites(self.sites.energy, self.sites.z_t, self.sites.T)
-        start = np.full((self.size, self.sublattices, self.species), 0.7)
-        found = descent.descend(
-            p, jnp.arange(self.size), jnp.asarray(start), jnp.asarray(self.size), n_max=self.n_max, lanes=64
-        )
-        x = np.asarray(found.x)
-        return np.where(np.abs(x) > families.ORDER_FLOOR, x, 0.0)
-
-    def _single(self, x: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """Follow the product minimum to λ = 1; where that has no order the family is empty."""
-        J = self.z_t[:, None, :] * x[:, ::-1, :]
+    def _single(self, x: np.ndarray) -> tuple[_State, np.ndarray]:
+        """Follow the product minimum to λ = 1; where that has no order the family is empty. Returns the family and
+        where its order shrank to zero on the way."""
+        J = self.sites.z_t[:, None, :] * x[:, ::-1, :]
         names = families.variants(Family.SINGLE, self.species, self.sublattices)[0]
         scale = np.empty_like(J)
-        scale[:] = 0.1 * np.maximum(self.z_t.max(-1), 1e-12)[:, None, None]
+        scale[:] = 0.1 * np.maximum(self.sites.z_t.max(-1), 1e-12)[:, None, None]
         index = np.flatnonzero(np.abs(x).max((-1, -2)) > 0)
-        return self._descend(Family.SINGLE, names, index, J[index], scale[index], self.sites, self.cold)
+        state, _, phi = self._descend(Family.SINGLE, names, index, J[index], scale[index], self.sites, self.cold)
+        ordered = np.abs(phi).max((-1, -2)) > families.SINGLE_FLOOR
+        return state._replace(ok=state.ok & ordered), state.ok & ~ordered
 
-    def _without_singles(self, family: Family) -> tuple[np.ndarray, np.ndarray, Look]:
+    def _without_singles(self, family: Family) -> _State:
         """Normal, pair and anti-pair families, from one uniform start and, on two sublattices, staggered ones."""
         size = np.maximum(self.exchange, self.slow_T)
-        sites = self.sites._replace(T=jnp.asarray(self.slow_T))
+        sites = self.sites._replace(T=self.slow_T)
         possible = self.slow_T > 0
         if family is not Family.NORMAL:
             possible &= self.slow_T < _HOTTEST * self.n_max * self.exchange
         index = np.flatnonzero(possible)
-        best, good = np.zeros((self.size, self.sublattices, len(self.names))), np.zeros(self.size, bool)
+        best = self._nothing()
         if family is Family.NORMAL:
-            good = self.slow_T == 0
-        lowest = np.full(self.size, np.inf)
-        starts = [
-            (names, tilt)
-            for names in families.variants(family, self.species, self.sublattices)
-            for tilt in ((0.0,) if self.sublattices == 1 else (0.0, 0.5))
-        ]
-        for names, tilt in starts:
-            start = np.zeros((self.size, self.sublattices, len(names)))
-            if family is not Family.NORMAL:
-                start[..., 0] = size[:, None]
-            if tilt > 0:
-                start[..., -1] = tilt * size[:, None] * np.array([1.0, -1.0])
-            scale = np.broadcast_to(size[:, None, None], start.shape)
-            fields, ok = self._descend(family, names, index, start[index], scale[index], sites, False)
-            look = self._survey(fields, np.ones(self.size))
-            F = np.asarray(look.free_energy)
-            ok &= np.isfinite(F)
-            lower = ok & (F + 1e-12 * (1.0 + np.abs(F)) < lowest)
-            best = np.where(lower[:, None, None], fields, best)
-            lowest, good = np.where(lower, F, lowest), good | ok
-        return best, good, look if len(starts) == 1 else self._survey(best, np.ones(self.size))
+            # Without hopping and temperature no field moves anything.
+            best = self._at_own_temperature(family, best._replace(ok=self.slow_T == 0))
+        for names in families.variants(family, self.species, self.sublattices):
+            for tilt in (0.0,) if self.sublattices == 1 else (0.0, 0.5):
+                start = np.zeros((self.size, self.sublattices, len(names)))
+                if family is not Family.NORMAL:
+                    start[..., 0] = size[:, None]
+                if tilt > 0:
+                    start[..., -1] = tilt * size[:, None] * np.array([1.0, -1.0])
+                scale = np.broadcast_to(size[:, None, None], start.shape)
+                state, order, _ = self._descend(family, names, index, start[index], scale[index], sites, False)
+                if family is not Family.NORMAL:
+                    state = state._replace(ok=state.ok & (order > families.ORDER_FLOOR))
+                state = self._at_own_temperature(family, state)
+                F = state.free_energy
+                lower = state.ok & np.isfinite(F) & (F + 1e-12 * (1.0 + np.abs(F)) < best.free_energy)
+                best = _State(*(_where(lower, new, old) for new, old in zip(state, best, strict=True)))
+        return best
+
+    def _nothing(self) -> _State:
+        shape = (self.size, self.sublattices, len(self.names))
+        no = np.zeros(self.size, bool)
+        return _State(np.zeros(shape), no, np.full(self.size, np.inf), np.zeros(self.size))
+
+    def _at_own_temperature(self, family: Family, state: _State) -> _State:
+        """Evaluate again where the fields were found at another temperature."""
+        index = np.flatnonzero(state.ok & ((self.slow_T != self.sites.T) | ~np.isfinite(state.free_energy)))
+        if not index.size:
+            return state
+        look = survey(
+            evaluate.pick(self.sites, index), state.fields[index], np.ones(index.size),
+            np.full(index.size, family), self.n_max, cold=self.cold,
+        )  # fmt: skip
+        ok, F, dressing = state.ok.copy(), state.free_energy.copy(), state.dressing.copy()
+        F[index], dressing[index] = look.free_energy, families.dressing(look)
+        if family is not Family.NORMAL:
+            column = self.names.index(families.variants(family, self.species, self.sublattices)[0][0])
+            ok[index] &= np.abs(look.mean[..., column]).max(-1) > families.ORDER_FLOOR
+        return _State(state.fields, ok, F, dressing)
 
     def _descend(
         self,
@@ -248,42 +256,62 @@ class _Points:
         scale: np.ndarray,
         sites: Sites,
         cold: bool,
-    ) -> tuple[np.ndarray, np.ndarray]:
-        """Run the jobs; returns fields of all points in the order of `dressed.NAMES`, and where they converged."""
-        fields = np.zeros((self.size, self.sublattices, len(self.names)))
-        ok = np.zeros(self.size, bool)
+    ) -> tuple[_State, np.ndarray, np.ndarray]:
+        """Run the jobs; returns the family at all points, the average that its first field couples to, and phi."""
+        out = self._nothing()
+        order, phi = np.zeros(self.size), np.zeros((self.size, self.sublattices, self.species))
         if index.size == 0:
-            return fields, ok
-        nodes = _plan_nodes(self.width, np.asarray(sites.T)) if not cold else 0
-        plan = Plan(
-            families.KIND[family],
-            names,
-            families.STAGES.get(family, (1.0,)),
-            self.n_max,
-            self.species,
-            cold,
-            nodes,
-        )
-        room = self.size - index.size
-        found: Reached = families.descend(
-            sites,
-            jnp.asarray(np.concatenate([index, np.full(room, index[-1])])),
-            jnp.asarray(np.concatenate([start, np.repeat(start[-1:], room, 0)])),
-            jnp.asarray(np.concatenate([scale, np.repeat(scale[-1:], room, 0)])),
-            jnp.asarray(index.size),
-            plan=plan,
-            lanes=min(families.LANES, self.size),
-        )
-        x = np.asarray(found.x)[: index.size]
+            return out, order, phi
+        plan = Plan(families.KIND[family], names, families.STAGES.get(family, (1.0,)), self.n_max, self.species, cold)
+        found = families.descend(sites, index, start, scale, plan=plan)
         # The functional is even in every order-making field; the sign is a choice of phase.
         for i, name in enumerate(names):
-            column = x[..., i]
+            column = found.x[..., i]
             if families.makes_order(name):
                 overall = np.where(column[np.arange(index.size), np.abs(column).argmax(-1)] < 0, -1.0, 1.0)
                 column = column * overall[:, None]
-            fields[index] += column[..., None] * families.spread(name, self.species)
-        ok[index] = np.asarray(found.converged)[: index.size]
-        return fields, ok
+            out.fields[index] += column[..., None] * families.spread(name, self.species)
+        out.ok[index], out.free_energy[index], out.dressing[index] = found.converged, found.free_energy, found.dressing
+        order[index], phi[index] = np.abs(found.mean[..., 0]).max(-1), found.phi
+        return out, order, phi
+
+
+def _where(which: np.ndarray, new: np.ndarray, old: np.ndarray) -> np.ndarray:
+    return np.where(which.reshape(-1, *[1] * (new.ndim - 1)), new, old)
+
+
+def survey(p: Sites, fields: np.ndarray, lam: np.ndarray, family: np.ndarray, n_max: int, *, cold: bool) -> Look:
+    """Look at states of known families, each in the smallest basis that holds its fields.
+
+    fields: in the order of `dressed.NAMES`, (point, sublattice, field). Averages and gradients of fields that a
+    symmetry of the family makes vanish are 0; so are all responses of these fields, which are not asked for.
+    """
+    species = p.z_t.shape[1]
+    whole: Look | None = None
+    for code in np.unique(family):
+        index = np.flatnonzero(family == code)
+        f = bond.frame(n_max, species, families.KIND[Family(code)])
+        held = [i for i, name in enumerate(dressed.NAMES[species]) if f.holds(name)]
+        names = tuple(dressed.NAMES[species][i] for i in held)
+        part = evaluate.look(
+            evaluate.pick(p, index), np.ascontiguousarray(fields[index][..., held]), lam[index],
+            f=f, names=names, cold=cold,
+        )  # fmt: skip
+        part = _widened(part, held, len(dressed.NAMES[species]))
+        if whole is None:
+            whole = Look(*(np.zeros((len(lam), *v.shape[1:])) for v in part))
+        for everything, piece in zip(whole, part, strict=True):
+            everything[index] = piece
+    assert whole is not None
+    return whole
+
+
+def _widened(look: Look, held: list[int], n: int) -> Look:
+    shape = look.mean.shape[:-1]
+    gradient, mean, response = np.zeros((*shape, n)), np.zeros((*shape, n)), np.zeros((*shape, n, n))
+    gradient[..., held], mean[..., held] = look.gradient, look.mean
+    response[..., np.array(held)[:, None], held] = look.response
+    return look._replace(gradient=gradient, mean=mean, response=response)
 
 
 def _exchange(mixture: Mixture, z_t: np.ndarray) -> np.ndarray:
@@ -293,16 +321,3 @@ def _exchange(mixture: Mixture, z_t: np.ndarray) -> np.ndarray:
     product_t = z_t[:, 0] * z_t[:, -1]
     largest = np.sqrt(product_t)
     return product_t / (2 * mixture.dim) / np.maximum(stiff, largest + 1e-300)
-
-
-def _plan_nodes(width: np.ndarray, T: np.ndarray) -> int:
-    warm = T > 0
-    if not warm.any():
-        return 0
-    return bond.enough_nodes(float((width[warm] / T[warm]).max()))
-
-
-def _dressing(look: Look) -> np.ndarray:
-    variance = np.asarray(look.variance)
-    root = np.sqrt(np.where(variance > 0, variance, 1.0))
-    return np.where(variance > 0, -np.asarray(look.bond) / root, 0.0)

@@ -6,7 +6,8 @@ import numpy as np
 import pytest
 
 from gutz import precision  # noqa: F401
-from gutz.ansatz import bond
+from gutz.ansatz import bond, evaluate
+from gutz.ansatz.second import second_order
 from gutz.errors import InputError
 
 
@@ -103,6 +104,43 @@ def test_smaller_frames_give_the_same(kind, T):
     case = Case(2, 2, kind, 2)
     value = energy_function(case, T)(jnp.asarray(case.h(case.x)), jnp.asarray(T), case.weight())
     assert value == pytest.approx(case.reference(T), rel=1e-11)
+
+
+def in_numbers(case, T, h=None):
+    """The bond term without compilation, and its derivative in the Hamiltonians of the sites."""
+    h = case.h(case.x) if h is None else h
+    given = np.diagonal(h, axis1=-2, axis2=-1) if case.f.diagonal else h
+    lv = evaluate.levels(given[None], np.array([T]), case.f, cold=T == 0)
+    V = np.broadcast_to(lv.vectors, (1, *h.shape))
+    b = np.swapaxes(V, -1, -2)[:, :, None] @ case.f.lower @ V[:, :, None]
+    phi = np.einsum("psaii,psi->psa", b, lv.weight)
+    b = b - phi[..., None, None] * np.eye(b.shape[-1])
+    nodes = 0 if T == 0 else bond.enough_nodes(np.ptp(lv.energy) / T)
+    out = second_order(lv, b, np.asarray(case.weight())[None], case.f, cold=T == 0, nodes=nodes)
+    return out.value[0], (V @ out.slope @ np.swapaxes(V, -1, -2))[0]
+
+
+@pytest.mark.parametrize("T", TEMPERATURES)
+@pytest.mark.parametrize("kind", FIELDS)
+@pytest.mark.parametrize("sublattices", [1, 2])
+def test_in_numbers_agrees_with_the_double_sum(sublattices, kind, T):
+    case = Case(3, 2, kind, sublattices)
+    assert in_numbers(case, T)[0] == pytest.approx(case.reference(T), rel=1e-10)
+
+
+@pytest.mark.parametrize(("symmetric", "T"), [(False, 0.0), (False, 0.02), (False, 1.0), (True, 0.02), (True, 1.0)])
+@pytest.mark.parametrize("kind", FIELDS)
+def test_slope_in_numbers_matches_differences_of_the_double_sum(kind, T, symmetric):
+    """Symmetric: exactly degenerate levels (at T = 0 the lowest ones too, where there is no derivative)."""
+    case = Case(2, 2, kind, 1, symmetric)
+    change = case.h(case.direction) - case.h(0.0 * case.direction)
+    e = 1e-4
+
+    def at(k):
+        return case.reference(T, case.x + k * e * case.direction)
+
+    numeric = (8 * (at(1) - at(-1)) - (at(2) - at(-2))) / (12 * e)
+    assert np.sum(in_numbers(case, T)[1] * change) == pytest.approx(numeric, rel=2e-7, abs=1e-12)
 
 
 @pytest.mark.parametrize("symmetric", [False, True])

@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 from gutz import precision  # noqa: F401
-from gutz.ansatz import bond, derived, dressed, selection
+from gutz.ansatz import bond, derived, dressed, evaluate, selection
 from gutz.ansatz.families import DRESSING_LARGE, Family
 from gutz.model import Mixture
 from gutz.status import Status
@@ -189,11 +189,11 @@ def test_first_derivatives_by_jax():
     p = dressed.sites(mixture, jnp.asarray(mixture.mu), jnp.asarray(mixture.T), N_MAX, 2)
     x = jnp.asarray(0.05 * rng.normal(size=(1, 2, 6)))
     f, names = bond.frame(N_MAX, 2, "full"), dressed.NAMES[2]
-    at = dressed.look(p, x, jnp.ones(1), f=f, names=names, cold=False, nodes=24)
+    at = evaluate.look(evaluate.numbers(p), np.asarray(x), np.ones(1), f=f, names=names, cold=False, nodes=64)
 
     def F(x, energy, T):
         q = p._replace(energy=energy, T=T)
-        return dressed.free_energy(q, x, jnp.ones(1), f=f, names=names, cold=False, nodes=24).sum()
+        return dressed.free_energy(q, x, jnp.ones(1), f=f, names=names, cold=False, nodes=64).sum()
 
     value, (in_x, in_energy, in_T) = jax.value_and_grad(F, argnums=(0, 1, 2))(x, p.energy, p.T)
     assert value == pytest.approx(float(at.free_energy[0]), abs=1e-14)
