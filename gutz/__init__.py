@@ -21,13 +21,24 @@ _HOME = {
     "critical_temperature": "gutz.temperature",
     "exchange_couplings": "gutz.exchange",
     "Mixture": "gutz.model",
+    "noise_map": "gutz.noise",
     "Phase": "gutz.phases",
     "Solution": "gutz.solution",
     "solve": "gutz.solver",
     "Status": "gutz.status",
 }
 
-__all__ = ["compare", "critical_temperature", "exchange_couplings", "Mixture", "Phase", "Solution", "solve", "Status"]
+__all__ = [
+    "compare",
+    "critical_temperature",
+    "exchange_couplings",
+    "Mixture",
+    "noise_map",
+    "Phase",
+    "Solution",
+    "solve",
+    "Status",
+]
 
 
 def __getattr__(name: str) -> Any:

@@ -1,0 +1,19 @@
+"""Noise-correlation maps of every phase: what averages of n_a(k) n_b(k') over many pictures show."""
+
+from gutz.noise.grid import Grid, NoiseMap
+from gutz.noise.maps import cloud_map, maps, noise_map
+from gutz.noise.moments import LocalMoments, local_moments
+from gutz.noise.product import ProductMap
+from gutz.noise.recipes import Validity
+
+__all__ = [
+    "Grid",
+    "LocalMoments",
+    "NoiseMap",
+    "ProductMap",
+    "Validity",
+    "cloud_map",
+    "local_moments",
+    "maps",
+    "noise_map",
+]
