@@ -27,6 +27,10 @@ TARGET_FACTOR = 10.0
 """Points whose filling or entropy is given are solved about this many times."""
 START_SECONDS = 30.0
 """Loading and compiling, the first time."""
+CLOUD_POINTS = 4000
+"""Local states solved for one cloud, the search for its chemical potentials and temperature included."""
+MARGIN_FACTOR = 5.0
+"""How much more a heating margin takes."""
 BASE_BYTES = 600_000_000
 """Memory of the loaded program before the first point."""
 WORKING_COPIES = 6
@@ -35,7 +39,7 @@ WORKING_COPIES = 6
 
 def run(file: Path, overrides: Sequence[str], as_json: bool, quiet: bool, debug: bool) -> int:
     """Check the file and print the estimate; mistakes raise InputError."""
-    source, full = load(file, overrides)
+    source, full = load(file, overrides, clouds=True)
     check_physics(full)
     found = estimate(full)
     remarks = _cautions(full)
@@ -74,6 +78,8 @@ def _seconds_per_point(full: Plan) -> float:
     seconds = max(LEAST_SECONDS, SECONDS_PER_POINT * (states / STATES) ** GROWTH)
     targets = {axis.target.path for axis in full.axes} & {"mixture.filling", "mixture.entropy"}
     solved_for = spec.mixture.filling is not None or spec.mixture.entropy is not None or targets
+    if spec.trap is not None:
+        return seconds * CLOUD_POINTS * (MARGIN_FACTOR if spec.trap.wanted else 1.0)
     return seconds * (TARGET_FACTOR if solved_for else 1.0)
 
 

@@ -33,7 +33,7 @@ def run(
     debug: bool,
 ) -> int:
     """Print the Hubbard parameters; draw them where --out names a folder."""
-    source, full = load(file, overrides)
+    source, full = load(file, overrides, clouds=True)
     if full.spec.lattice is None:
         raise InputError(f"{source.name}: has no [lattice] section to compute Hubbard parameters from")
     if unit not in UNITS:

@@ -14,10 +14,16 @@ from gutz.scan.document import Document
 from gutz.scan.plan import Plan, plan
 
 
-def load(file: Path, overrides: Sequence[str]) -> tuple[Document, Plan]:
-    """Read and check a file. Raises InputError listing its mistakes."""
+def load(file: Path, overrides: Sequence[str], *, clouds: bool = False) -> tuple[Document, Plan]:
+    """Read and check a file. Raises InputError listing its mistakes.
+
+    clouds: the command can do with atom numbers in a [trap] in place of chemical potentials.
+    """
     source = document.read(file, overrides)
-    return source, plan(spec.check(source))
+    full = plan(spec.check(source))
+    if full.spec.trap is not None and not clouds:
+        raise InputError(f"{source.name}: has a [trap], which this command does not solve; use: gutz cloud")
+    return source, full
 
 
 def values(texts: Sequence[str]) -> dict[str, float]:

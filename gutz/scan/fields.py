@@ -99,6 +99,51 @@ def per_direction(single: Callable[[Any], Any]) -> Callable[[Any], Any]:
     return per_species(directions)
 
 
+def per_axis(single: Callable[[Any], Any]) -> Callable[[Any], Any]:
+    """Return a converter for one value, [x, y, z] for every species, or [[x, y, z], [x, y, z]] per species."""
+    rule = "must be one value, a list [x, y, z], or [[x, y, z], [x, y, z]] where each species has its own"
+
+    def row(value: Any) -> tuple[Any, ...]:
+        if len(value) != 3 or any(isinstance(part, list) for part in value):
+            raise ValueError(rule)
+        return tuple(single(part) for part in value)
+
+    def convert(value: Any) -> Any:
+        if not isinstance(value, list):
+            return single(value)
+        if value and all(isinstance(part, list) for part in value):
+            if len(value) > 2:
+                raise ValueError(rule)
+            return tuple(row(part) for part in value)
+        return row(value)
+
+    return convert
+
+
+def frequency(value: Any) -> float:
+    """Convert a trap frequency given as text with a unit, into Hz (cycles per second)."""
+    if not isinstance(value, str):
+        raise ValueError('needs a unit, for example "60 Hz"')
+    try:
+        found = parse_quantity(value, "frequency", "")
+    except InputError:
+        units = ", ".join(KINDS["frequency"].units)
+        raise ValueError(f"must be a number and one of the units {units}") from None
+    if not found > 0:
+        raise ValueError("must be greater than 0: a trap without frequency does not bind")
+    return found
+
+
+def box(value: Any) -> tuple[float, ...]:
+    """Convert the sides of a box: one number of sites, or [x, y, z]."""
+    side = real(lowest=1.0)
+    if not isinstance(value, list):
+        return (side(value),) * 3
+    if len(value) != 3:
+        raise ValueError("must be one number of sites, or a list [x, y, z]")
+    return tuple(side(part) for part in value)
+
+
 def energy(lowest: float | None = None) -> Callable[[Any], Energy]:
     """Return a converter for an energy: a plain number, or text such as "5 nK" or "0.1 U1"."""
     number = real(lowest)

@@ -32,6 +32,10 @@ PARAMETERS: dict[str, Parameter] = {
     "lattice.a11": Parameter("Scattering length 1-1", "length"),
     "lattice.a22": Parameter("Scattering length 2-2", "length"),
     "lattice.a12": Parameter("Scattering length 1-2", "length"),
+    "trap.N": Parameter("Atoms", "number", ("species",), 0.0),
+    "trap.frequency": Parameter("Trap frequency", "frequency", ("species", "direction"), 0.0),
+    "trap.curvature": Parameter("Trap curvature", "number", ("species", "direction"), 0.0),
+    "trap.T_over_Tc": Parameter("Initial T over T_c", "number", (), 0.0),
 }
 
 LENGTH_UNITS = tuple(KINDS["length"].units)
@@ -82,6 +86,8 @@ def units_of(parameter: Parameter, in_lattice: bool) -> tuple[str, ...]:
     """Units an axis over this parameter may be given in; the first is the one meant where none is given."""
     if parameter.kind == "length":
         return ("a0", *(unit for unit in LENGTH_UNITS if unit != "a0"))
+    if parameter.kind == "frequency":
+        return tuple(KINDS["frequency"].units)
     if parameter.kind == "depth":
         return ("E_R",)
     if parameter.kind == "energy" and in_lattice:

@@ -108,6 +108,8 @@ def run(
     """
     source = document.read(Path(path), overrides)
     full = plan(spec.check(source))
+    if full.spec.trap is not None:
+        raise InputError(f"{source.name}: has a [trap], which a scan does not solve; use: gutz cloud")
     if not full.axes:
         raise InputError(f"{source.name}: has no [axes.NAME] section; a scan needs one to five")
     check_physics(full)

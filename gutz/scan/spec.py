@@ -1,4 +1,4 @@
-"""What a scan file says, checked: sections [mixture] [lattice] [ansatz] [axes] [output].
+"""What a scan file says, checked: sections [mixture] [lattice] [trap] [ansatz] [axes] [output].
 
 In:  a `Document` (text of a TOML file, overrides).
 Out: a frozen `Spec`, or one `InputError` that lists every mistake, one sentence each, with its line.
@@ -9,12 +9,13 @@ Free of jax. pydantic lives in this file and goes no further.
 import hashlib
 import json
 import math
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from typing import Annotated, Any, NamedTuple
 
 from pydantic import BaseModel, ConfigDict, PlainValidator, ValidationError
 
 from gutz.errors import InputError
+from gutz.phases import WORDS, Phase
 from gutz.scan import fields, parameters
 from gutz.scan.document import Document
 from gutz.scan.fields import Beam, Energy, Per
@@ -90,6 +91,23 @@ class LatticeSection(_Section):
     dim: Annotated[int, PlainValidator(fields.whole(1, 3))] = 3
 
 
+WANTED = tuple(WORDS[phase] for phase in Phase if phase not in (Phase.UNDECIDED, Phase.VACUUM, Phase.COLLAPSE))
+"""Phases that can be looked for in a cloud."""
+
+
+class TrapSection(_Section):
+    """[trap]: atom numbers and what holds them; the chemical potentials follow."""
+
+    N: Annotated[Per | None, PlainValidator(fields.per_species(fields.real(above=0.0)))] = None
+    frequency: Annotated[Any, PlainValidator(fields.per_axis(fields.frequency))] = None
+    curvature: Annotated[Any, PlainValidator(fields.per_axis(fields.real(above=0.0)))] = None
+    box: Annotated[tuple[float, ...] | None, PlainValidator(fields.box)] = None
+    gravity: Annotated[str | None, PlainValidator(fields.one_of("x", "y", "z"))] = None
+    T_over_Tc: Annotated[float | None, PlainValidator(fields.real(0.0))] = None
+    interacting: Annotated[bool, PlainValidator(fields.flag)] = False
+    wanted: Annotated[str | None, PlainValidator(fields.one_of(*WANTED))] = None
+
+
 class AnsatzSection(_Section):
     """[ansatz]: what is minimised."""
 
@@ -134,6 +152,7 @@ class Spec(_Section):
 
     mixture: MixtureSection = MixtureSection()
     lattice: LatticeSection | None = None
+    trap: TrapSection | None = None
     ansatz: AnsatzSection = AnsatzSection()
     axes: dict[str, AxisSection] = {}
     output: OutputSection = OutputSection()
@@ -172,6 +191,7 @@ class Mistake(NamedTuple):
 _SECTIONS: dict[str, type[BaseModel]] = {
     "mixture": MixtureSection,
     "lattice": LatticeSection,
+    "trap": TrapSection,
     "ansatz": AnsatzSection,
     "axes": AxisSection,
     "output": OutputSection,
@@ -280,7 +300,9 @@ def _of_presence(data: dict[str, Any]) -> Iterator[Mistake]:
         yield Mistake("mixture", "both T and entropy are given; give at most one")
     if not all(_is_parameter(path) for path in swept if path):
         return  # what seems to be missing may be what the misspelt axis was meant to give
-    if not touched("mixture.mu") and not touched("mixture.filling"):
+    if "trap" in data:
+        yield from _of_trap_presence(data, touched)
+    elif not touched("mixture.mu") and not touched("mixture.filling"):
         yield Mistake("mixture", "neither mu nor filling is given; give exactly one")
     if lattice is None:
         for name in ("t", "U"):
@@ -298,6 +320,24 @@ def _of_presence(data: dict[str, Any]) -> Iterator[Mistake]:
         for name in ("a22", "a12"):
             if not pair and touched(f"lattice.{name}"):
                 yield Mistake(f"lattice.{name}", "must be left out, because there is one species")
+
+
+def _of_trap_presence(data: dict[str, Any], touched: Callable[[str], bool]) -> Iterator[Mistake]:
+    """A trap gives atom numbers in place of chemical potentials, and one way of holding them."""
+    for name in ("mu", "filling", "offset"):
+        if touched(f"mixture.{name}"):
+            yield Mistake(f"mixture.{name}", "must be left out, because [trap] gives atom numbers")
+    if not touched("trap.N"):
+        yield Mistake("trap.N", "is missing; give the atoms of each species")
+    shape, other = ("frequency", "curvature") if "lattice" in data else ("curvature", "frequency")
+    if touched(f"trap.{other}"):
+        where = "with" if "lattice" in data else "without"
+        yield Mistake(f"trap.{other}", f"must be left out {where} [lattice]; give trap.{shape}")
+    elif touched(f"trap.{shape}") == touched("trap.box"):
+        yield Mistake("trap", f"holds nothing: give either {shape} or box, and not both")
+    given = [name for name in ("mixture.T", "mixture.entropy", "trap.T_over_Tc") if touched(name)]
+    if len(given) > 1:
+        yield Mistake(given[-1], f"must be left out where {given[0]} is given")
 
 
 def _is_parameter(path: str) -> bool:
@@ -335,6 +375,7 @@ def _of_combination(spec: Spec) -> Iterator[Mistake]:
     if spec.points > MAX_POINTS:
         yield Mistake("axes", f"together give {spec.points:,} points; at most {MAX_POINTS:,} are allowed")
     yield from _of_lengths(spec)
+    yield from _of_trap(spec)
     yield from _of_units(spec)
 
 
@@ -344,6 +385,8 @@ def _of_axis(spec: Spec, name: str, axis: AxisSection, found: parameters.Target)
         yield Mistake(key, "the name of an axis must be a word of letters, digits and underscores, at most 40")
     elif name in _RESERVED and not (name in GIVEN_BY_AXIS and found.path == f"mixture.{name}" and found.whole):
         yield Mistake(key, f'"{name}" is the name of an output; call the axis something else')
+    if found.path.startswith("trap.") and spec.trap is None:
+        yield Mistake(f"{key}.parameter", f"{axis.parameter} needs a [trap] section")
     if found.path.startswith("lattice.") and spec.lattice is None:
         yield Mistake(f"{key}.parameter", f"{axis.parameter} needs a [lattice] section")
     if spec.lattice is not None and found.path in ("mixture.t", "mixture.U", "mixture.U12"):
@@ -355,7 +398,7 @@ def _of_axis(spec: Spec, name: str, axis: AxisSection, found: parameters.Target)
         yield Mistake(f"{key}.parameter", f"{axis.parameter} cannot be set for one species where same_light = true")
     if found.species is not None and max(found.species) >= spec.species:
         yield Mistake(f"{key}.parameter", f"{axis.parameter} names species 2, but there is one species")
-    top = 3 if found.path == "lattice.depth" else spec.dim
+    top = 3 if found.path in ("lattice.depth", "trap.frequency", "trap.curvature") else spec.dim
     if found.directions is not None and max(found.directions) >= top:
         yield Mistake(f"{key}.parameter", f"{axis.parameter} names a direction beyond dim = {spec.dim}")
     allowed = parameters.units_of(found.parameter, spec.lattice is not None)
@@ -371,7 +414,7 @@ def _of_axis(spec: Spec, name: str, axis: AxisSection, found: parameters.Target)
     if axis.spacing == "log" and low <= 0:
         yield Mistake(f"{key}.start", f"{low:g} is not allowed; it must be greater than 0 for log spacing")
     elif found.parameter.lowest is not None:
-        strict = found.path in ("mixture.filling", "lattice.depth")
+        strict = found.path in ("mixture.filling", "lattice.depth", "trap.N", "trap.frequency", "trap.curvature")
         if low < found.parameter.lowest or (strict and low == 0):
             rule = "greater than 0" if strict else f"at least {found.parameter.lowest:g}"
             yield Mistake(key, f"starts or ends at {low:g}; {axis.parameter} must be {rule}")
@@ -397,6 +440,27 @@ def _of_lengths(spec: Spec) -> Iterator[Mistake]:
         yield Mistake("lattice.same_light", "must be false or left out, because there is one species")
     if species == 1 and (spec.mixture.U12 != 0 or any(a.parameter == "mixture.U12" for a in spec.axes.values())):
         yield Mistake("mixture.U12", "must be left out, because there is one species")
+
+
+def _of_trap(spec: Spec) -> Iterator[Mistake]:
+    """Values of [trap] that do not fit the species or the lattice."""
+    trap, species = spec.trap, spec.species
+    if trap is None:
+        return
+    if isinstance(trap.N, tuple) and len(trap.N) != species:
+        yield Mistake("trap.N", f"has {len(trap.N)} entries; it must have {species}, one per species")
+    for name in ("frequency", "curvature"):
+        value = getattr(trap, name)
+        if isinstance(value, tuple) and isinstance(value[0], tuple) and len(value) != species:
+            yield Mistake(f"trap.{name}", f"has {len(value)} lists; it must have {species}, one per species")
+    if trap.gravity is not None and (spec.lattice is None or trap.box is not None or species == 1):
+        yield Mistake("trap.gravity", "must be left out but for two species in a [lattice] with trap.frequency")
+    swept = {axis.parameter for axis in spec.axes.values()}
+    starts = trap.T_over_Tc is not None or "trap.T_over_Tc" in swept
+    if starts and trap.box is not None:
+        yield Mistake("trap.T_over_Tc", "must be left out with a box; give mixture.entropy")
+    if trap.interacting and (not starts or spec.lattice is None):
+        yield Mistake("trap.interacting", "must be left out but with [lattice] and trap.T_over_Tc")
 
 
 def _of_units(spec: Spec) -> Iterator[Mistake]:

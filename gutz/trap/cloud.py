@@ -154,11 +154,13 @@ def solve_cloud(
     T: float | None = None,
     entropy: float | None = None,
     guess: FloatArray | None = None,
+    near: Cloud | None = None,
     tolerance: float | None = None,
 ) -> Cloud:
     """Find the cloud with the given atom numbers (species,) and T, or entropy per particle (k_B).
 
-    guess: (mu_1, .., T) to start from. tolerance: relative error allowed from the spacing of the nodes.
+    guess: (mu_1, .., T) to start from. near: a similar cloud, whose nodes then serve again.
+    tolerance: relative error allowed from the spacing of the nodes.
     Raises InputError for numbers that make no sense, or a trap too tight for the local-density approximation.
     """
     atoms = _checked_atoms(gas, trap, atoms)
@@ -175,10 +177,13 @@ def solve_cloud(
     y = first_guess(gas, trap, atoms, T) if guess is None else np.array(guess, float)
     if T is not None:
         y[-1] = T
+    reused = None
+    if near is not None and (near.nodes.line is None) == (trap.ratio is None or trap.size is not None):
+        reused = problem.mesh.again(near.nodes, np.append(near.mu, near.T), y)
     frozen = False
     while True:
-        nodes, climbed, error = _solve(problem, y)
-        y = climbed.sides[0].y
+        nodes, climbed, error = _solve(problem, y, reused)
+        reused, y = None, climbed.sides[0].y
         if problem.free[-1] and not climbed.met and y[-1] <= 1.01 * COLDEST * gas.scale:
             frozen = True
             problem = replace(problem, free=np.append(np.ones(gas.species, bool), False))
@@ -227,18 +232,21 @@ def _checked_atoms(gas: LocalGas, trap: Trap, atoms: FloatArray) -> FloatArray:
     return atoms
 
 
-def _solve(problem: _Problem, y: FloatArray) -> tuple[Nodes, Climbed, FloatArray]:
-    """Climb on coarse nodes, then on nodes refined until the estimated error is within the tolerance."""
+def _solve(problem: _Problem, y: FloatArray, reused: Nodes | None = None) -> tuple[Nodes, Climbed, FloatArray]:
+    """Climb on coarse nodes, then on nodes refined until the estimated error is within the tolerance.
+
+    reused: refined nodes of a similar cloud, which spare the coarse ones.
+    """
     mesh = problem.mesh
-    nodes = mesh.coarse(y)
+    nodes = mesh.coarse(y) if reused is None else reused
     for _ in range(_ROUNDS):
-        climbed = problem.climb(nodes, y, _ROUGH)
+        climbed = problem.climb(nodes, y, _ROUGH if reused is None else _MET)
         y = climbed.sides[0].y
         if not mesh.overflows(nodes, climbed.sides[0].states):
             break
-        nodes = mesh.coarse(y)
-    allowed = problem.tolerance * problem.size(climbed.sides[0].totals[-1])
-    nodes = mesh.fine(y, allowed)
+        nodes, reused = mesh.coarse(y), None
+    if reused is None:
+        nodes = mesh.fine(y, problem.tolerance * problem.size(climbed.sides[0].totals[-1]))
     for _ in range(_ROUNDS):
         climbed = problem.climb(nodes, y, _MET)
         best = climbed.sides[0]
@@ -267,6 +275,10 @@ def _finish(
     status, notes = Status.OK, []
     if heavy > CUTOFF_SHARE:
         status |= Status.CUTOFF
+        notes.append(
+            f"{heavy:.1e} of the atoms' weight sits at the highest occupation kept, {gas.n_max}; at most "
+            f"{CUTOFF_SHARE:g} is allowed: raise n_max, load fewer atoms, or weaken the trap"
+        )
     apart = max((float(np.abs(s.totals - best.totals)[:-1].max()) for s in climbed.sides[1:]), default=0.0)
     coexist = apart > _COEXIST * problem.goal[:-1].sum()
     if frozen:

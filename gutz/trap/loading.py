@@ -31,6 +31,7 @@ HOTTEST = 2.0
 
 _MARGIN_TOLERANCE = 5e-3
 _ACCURACY = 0.02
+_MOST_TRIALS = 25
 
 
 class Point(NamedTuple):
@@ -44,21 +45,29 @@ class Point(NamedTuple):
 
 
 def follow(points: Sequence[Point]) -> Iterator[Cloud]:
-    """Solve the points in turn, each from its neighbour's chemical potentials and temperature.
-
-    The guess is scaled with the largest energy of a site, which along a loading curve changes by orders.
-    """
-    last: Cloud | None = None
+    """Solve the points in turn, each from what its neighbours lead one to expect, on their nodes."""
+    solved: list[Cloud] = []
     for point in points:
-        guess = None
-        if last is not None and last.gas.species == point.gas.species:
+        guess, near = None, solved[-1] if solved and solved[-1].gas.species == point.gas.species else None
+        if near is not None:
             if not point.gas.fixed:
-                point.gas.n_max = last.gas.n_max
-            ratio = point.gas.scale / last.gas.scale
-            T = max(last.T, 10.0 * COLDEST * last.gas.scale)
-            guess = np.append((last.mu + 0.5 * last.gas.z_t) * ratio - 0.5 * point.gas.z_t, T * ratio)
-        last = solve_cloud(point.gas, point.trap, point.atoms, T=point.T, entropy=point.entropy, guess=guess)
-        yield last
+                point.gas.n_max = max(point.gas.n_max, near.gas.n_max)
+            guess = _scaled(near)
+            if len(solved) > 1:
+                guess = 2.0 * guess - _scaled(solved[-2])
+            guess[-1] = max(guess[-1], 10.0 * COLDEST)
+            guess *= point.gas.scale
+            guess[:-1] -= 0.5 * point.gas.z_t
+        solved = [
+            *solved[-1:],
+            solve_cloud(point.gas, point.trap, point.atoms, T=point.T, entropy=point.entropy, guess=guess, near=near),
+        ]
+        yield solved[-1]
+
+
+def _scaled(cloud: Cloud) -> FloatArray:
+    """(mu_1 + z t_1 / 2, .., T) in units of the largest energy of a site, which along a curve changes slowly."""
+    return np.append(cloud.mu + 0.5 * cloud.gas.z_t, cloud.T) / cloud.gas.scale
 
 
 @dataclass(frozen=True)
@@ -78,34 +87,33 @@ class Margin:
     words: str
 
 
-def heating_margin(cloud: Cloud, phase: Phase) -> Margin:
+def heating_margin(cloud: Cloud, phase: Phase, hint: float | None = None) -> Margin:
     """Warm the cloud (or cool it, where the phase is absent) at fixed atom numbers until the phase goes (or comes).
 
-    The entropy where the fraction of atoms in the phase crosses `PRESENT`, to 2 % in T. Raises InputError for vacuum.
+    hint: the critical temperature expected, in units of the largest energy of a site (a neighbour's).
+    Finds the entropy where the fraction of atoms in the phase crosses `PRESENT`, to 2 % in T. Raises InputError for
+    vacuum.
     """
     if phase == Phase.VACUUM:
         raise InputError('the wanted phase is "vacuum"; it must be a phase that holds atoms')
-    fraction, scale = cloud.fraction(phase), cloud.gas.scale
     if cloud.gas.ansatz == "product" and phase in (Phase.PAIRED, Phase.COUNTERFLOW):
-        return Margin(
-            phase, 0.0, np.nan, np.nan, np.nan, "the product ansatz cannot see this phase; use the dressed one"
-        )
+        words = "the product ansatz cannot see this phase; use the dressed one"
+        return Margin(phase, 0.0, np.nan, np.nan, np.nan, words)
+    fraction, coldest = cloud.fraction(phase), COLDEST * cloud.gas.scale
     present = fraction >= PRESENT
-    start = max(cloud.T, COLDEST * scale)
-    inner, outer = cloud, None
-    factor = 1.6 if present else 1.0 / 1.6
-    T = start
-    while COLDEST * scale <= T * factor <= HOTTEST * scale:
-        T *= factor
-        trial = _at_T(inner, T)
-        if (trial.fraction(phase) >= PRESENT) != present:
-            outer = trial
+    trials = _bracket(cloud, phase, present, hint)
+    if trials is None:
+        return _never(phase, fraction, present)
+    inner, outer = trials
+    for _ in range(_MOST_TRIALS):
+        low, high = np.log(max(inner.T, coldest)), np.log(max(outer.T, coldest))
+        if abs(high - low) < _ACCURACY:
             break
-        inner = trial
-    if outer is None:
-        return _never(cloud, phase, fraction, present)
-    while abs(np.log(outer.T / max(inner.T, 0.1 * COLDEST * scale))) > _ACCURACY:
-        middle = _at_T(inner, float(np.sqrt(max(inner.T, 0.1 * COLDEST * scale) * outer.T)))
+        # The fraction falls nearly straight towards the end of the phase, and stays 0 behind it.
+        ahead = inner.fraction(phase) - PRESENT
+        behind = outer.fraction(phase) - PRESENT
+        share = min(max(ahead / (ahead - behind), 0.1), 0.9) if ahead * behind < 0 else 0.5
+        middle = _at_T(inner, float(np.exp(low + share * (high - low))))
         if (middle.fraction(phase) >= PRESENT) == present:
             inner = middle
         else:
@@ -113,23 +121,42 @@ def heating_margin(cloud: Cloud, phase: Phase) -> Margin:
     critical = 0.5 * (inner.entropy_per_particle + outer.entropy_per_particle)
     margin = critical - cloud.entropy_per_particle
     words = (
-        f"the phase bears {margin:.3g} k_B per atom of heating before less than {PRESENT:.0%} of the atoms are in it"
+        f"it bears {margin:.3g} k_B per atom of heating before less than {PRESENT:.0%} of the atoms are in it"
         if present
-        else f"the phase is absent; it appears when the entropy is lower by {-margin:.3g} k_B per atom"
+        else f"it is absent, and appears when the entropy is lower by {-margin:.3g} k_B per atom"
     )
     return Margin(phase, fraction, critical, 0.5 * (inner.T + outer.T), margin, words)
 
 
+def _bracket(cloud: Cloud, phase: Phase, present: bool, hint: float | None) -> tuple[Cloud, Cloud] | None:
+    """Two clouds between which the phase goes, the first like the cloud itself; None if it never does."""
+    scale = cloud.gas.scale
+    step = 1.5 if present else 1 / 1.5
+    inner, T = cloud, max(cloud.T, COLDEST * scale)
+    wished = None if hint is None else hint * scale
+    if wished is not None and (wished > T) == present:
+        T = wished * (0.95 if present else 1.05) / step
+        step = 1.1 if present else 1 / 1.1
+    while COLDEST * scale <= T * step <= HOTTEST * scale:
+        T *= step
+        trial = _at_T(inner, T)
+        if (trial.fraction(phase) >= PRESENT) != present:
+            return inner, trial
+        inner = trial
+        step = step**1.3
+    return None
+
+
 def _at_T(near: Cloud, T: float) -> Cloud:
     guess = np.append(near.mu, T)
-    return solve_cloud(near.gas, near.trap, near.atoms, T=T, guess=guess, tolerance=_MARGIN_TOLERANCE)
+    return solve_cloud(near.gas, near.trap, near.atoms, T=T, guess=guess, near=near, tolerance=_MARGIN_TOLERANCE)
 
 
-def _never(cloud: Cloud, phase: Phase, fraction: float, present: bool) -> Margin:
+def _never(phase: Phase, fraction: float, present: bool) -> Margin:
     if present:
-        words = "the phase stays in the cloud up to the highest temperature tried"
+        words = "it stays in the cloud up to the highest temperature tried"
         return Margin(phase, fraction, np.nan, np.nan, np.inf, words)
-    words = "the phase appears at no temperature with these numbers and this trap"
+    words = "it appears at no temperature with these numbers and this trap"
     return Margin(phase, fraction, np.nan, np.nan, -np.inf, words)
 
 

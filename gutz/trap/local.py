@@ -4,6 +4,7 @@ In:  one set of Hubbard parameters; chemical potentials, a temperature.
 Out: `States`, arrays over the points, with the response of (n_1, n_2, S) to (mu_1, mu_2, T).
 """
 
+from collections.abc import Iterator
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -11,7 +12,7 @@ from numpy.typing import NDArray
 
 from gutz.errors import InputError
 from gutz.model import Mixture
-from gutz.phases import label
+from gutz.order import by_dimension
 from gutz.solver import CUTOFF_LADDER
 from gutz.targets import BATCH_SIZES, Evaluator
 
@@ -26,8 +27,8 @@ KEPT = (
 _STIFF = 1e9
 """Largest response kept."""
 
-_BATCH = BATCH_SIZES[1]
-"""Points per call: one compiled size serves every cloud."""
+_FEW = 5 * BATCH_SIZES[0]
+"""Up to here several of the smallest batches take less time than one of the next size."""
 
 
 class States(NamedTuple):
@@ -95,20 +96,29 @@ class LocalGas:
         self.n_max = higher[0]
         return True
 
+    def _pieces(self, count: int) -> Iterator[tuple[NDArray[np.intp], int]]:
+        """Cut points into whole batches, the last padded; the dressed ansatz pays per point and is not padded."""
+        begin = 0
+        while begin < count:
+            few = count - begin <= _FEW
+            size = BATCH_SIZES[0] if few else BATCH_SIZES[1]
+            piece = np.arange(begin, min(begin + size, count))
+            yield piece, size if self.ansatz == "product" else piece.size
+            begin += size
+
     def __call__(self, mu: FloatArray, T: float) -> States:
         """Solve at mu (point, species) and temperature T."""
         count = len(mu)
         self.solved += count
         evaluate = Evaluator(self.mixture.replace(mu=None, T=None, entropy=None), self.n_max, self.ansatz)
         parts: list[States] = []
-        for begin in range(0, count, _BATCH):
-            piece = np.arange(begin, min(begin + _BATCH, count))
-            # Always a whole batch, so that no smaller size is ever compiled; the dressed ansatz pays per point.
-            size = _BATCH if self.ansatz == "product" else piece.size
+        for piece, size in self._pieces(count):
             index = np.concatenate([piece, np.full(size - piece.size, piece[-1])])
             batch = evaluate(np.zeros(size, np.intp), mu[index], np.full(size, T))
             outputs = {name: np.asarray(batch.outputs[name])[: piece.size] for name in KEPT}
-            outputs["phase"] = label(outputs)
+            seen = {name: np.asarray(v)[: piece.size] for name, v in batch.outputs.items()}
+            hopping = np.broadcast_to(self.mixture.t, (piece.size, *self.mixture.t.shape[1:]))
+            outputs["phase"] = by_dimension(seen, hopping)["phase"]
             # At T = 0 a degenerate site responds without bound, or not definedly: the climb then goes by its steps.
             response = np.nan_to_num(np.asarray(batch.response)[: piece.size], posinf=_STIFF, neginf=-_STIFF)
             parts.append(States(outputs, np.clip(response, -_STIFF, _STIFF), np.asarray(batch.status)[: piece.size]))

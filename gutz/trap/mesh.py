@@ -39,6 +39,9 @@ class Mesh(Protocol):
     def coarse(self, y: FloatArray) -> Nodes:
         """Few nodes that reach well beyond the cloud at y."""
 
+    def again(self, nodes: Nodes, old: FloatArray, y: FloatArray) -> Nodes | None:
+        """Nodes of a cloud at `old`, stretched for a similar one at y; None where that saves nothing."""
+
     def fine(self, y: FloatArray, allowed: FloatArray) -> Nodes:
         """Nodes for the cloud at y whose error is within `allowed` (N_1, .., S)."""
 
@@ -86,6 +89,10 @@ class _Box:
         """As in `Mesh`."""
         return self.nodes
 
+    def again(self, nodes: Nodes, old: FloatArray, y: FloatArray) -> Nodes | None:
+        """As in `Mesh`."""
+        return None
+
     def fine(self, y: FloatArray, allowed: FloatArray) -> Nodes:
         """As in `Mesh`."""
         return self.nodes
@@ -123,6 +130,12 @@ class _Line:
     def _even(self, y: FloatArray, margin: float) -> Nodes:
         end = float((_reach(self.gas, y, margin) / self.ratio).max())
         return geometry.line_nodes(self.trap, np.linspace(0.0, end, _FIRST_NODES[self.gas.ansatz]))
+
+    def again(self, nodes: Nodes, old: FloatArray, y: FloatArray) -> Nodes | None:
+        """As in `Mesh`."""
+        assert nodes.line is not None
+        stretch = float((_reach(self.gas, y, 1.03) / self.ratio).max()) / float(nodes.line[-1])
+        return geometry.line_nodes(self.trap, nodes.line * stretch)
 
     def fine(self, y: FloatArray, allowed: FloatArray) -> Nodes:
         """As in `Mesh`."""
@@ -191,6 +204,10 @@ class _Plane:
     def coarse(self, y: FloatArray) -> Nodes:
         """As in `Mesh`."""
         return self._grid(y, 1.4, 0)
+
+    def again(self, nodes: Nodes, old: FloatArray, y: FloatArray) -> Nodes | None:
+        """As in `Mesh`."""
+        return None
 
     def fine(self, y: FloatArray, allowed: FloatArray) -> Nodes:
         """As in `Mesh`."""

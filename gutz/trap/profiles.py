@@ -229,3 +229,23 @@ def summary(cloud: Cloud, energy_unit: str) -> dict[str, Any]:
         "ansatz": cloud.gas.ansatz,
         "notes": list(cloud.notes),
     }
+
+
+def section(cloud: Cloud, across: tuple[int, int], points: int = 201) -> xr.Dataset:
+    """Phase and fillings in a plane through the middle of the first species' trap.
+
+    across: the axes of the plane. Dims: two positions in sites, species.
+    """
+    low, high = extent(cloud)
+    pad = 0.05 * (high - low)
+    rows = [np.linspace(low[a] - pad[a], high[a] + pad[a], points) for a in across]
+    sites = np.broadcast_to(cloud.trap.centre[0], (points, points, cloud.trap.axes)).copy()
+    sites[..., across[0]], sites[..., across[1]] = rows[0][:, None], rows[1][None, :]
+    found = at_sites(cloud, sites, ("filling",))
+    names = tuple(f"position_{AXES[a]}" for a in across)
+    coords: dict[str, Any] = {
+        name: (name, row, {"units": "1", "long_name": f"Position along {name[-1]} in sites"})
+        for name, row in zip(names, rows, strict=True)
+    }
+    coords["species"] = np.arange(1, cloud.gas.species + 1)
+    return xr.Dataset(labelled(found, names, "1"), coords=coords)
