@@ -34,7 +34,7 @@ _SUMS = {
     "pair": ("sum_pair", "<P+_i P_i+r>, P = b_1 b_2", "1"),
     "antipair": ("sum_antipair", "<A+_i A_i+r>, A = b+_2 b_1", "1"),
     "density": ("sum_density", "<n_ai n_b,i+r> - <n_ai><n_b,i+r>", "1"),
-    "entropy": ("entropy", "entropy per site", "k_B"),
+    "entropy": ("total_entropy", "entropy per site", "k_B"),
     "free_energy": ("grand_potential", "grand potential per site", "t-unit"),
 }
 

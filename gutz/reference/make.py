@@ -38,7 +38,8 @@ def make(
             continue
         start = time.process_time()
         raw = measure(entry, notice)
-        store.write(path, entry.name, finish(entry, raw, time.process_time() - start))
+        held[entry.name] = finish(entry, raw, time.process_time() - start)
+        store.write_all(path, held)
         made += 1
     return made, len(entries) - made
 

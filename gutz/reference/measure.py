@@ -126,7 +126,7 @@ def _solve(entry: Entry, length: int, bond: int) -> _Solved:
         numbers |= {"discarded": state.discarded}
         atoms = mps_correlators.filling(state).sum(axis=1)
     if entry.T > 0:
-        numbers |= {"entropy": state.entropy, "grand_potential": state.free_energy}
+        numbers |= {"total_entropy": state.entropy, "grand_potential": state.free_energy}
     with_mu = state.energy + (atoms @ np.array(entry.mu) if entry.T > 0 else 0.0)
     return _Solved(state, numbers | {"total_energy": float(with_mu), "atoms": atoms})
 

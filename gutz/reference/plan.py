@@ -204,7 +204,7 @@ def _convert(where: str, key: str, converter: Any, value: Any) -> Any:
 def _lengths(where: str, value: Any) -> tuple[int, ...]:
     if not isinstance(value, list):
         raise InputError(f"{where}: lengths = {kinds.shown(value)}: must be a list of whole numbers")
-    lengths = tuple(_convert(where, "lengths", kinds.whole(2, MAX_LENGTH), part) for part in value)
+    lengths = tuple(_convert(where, "lengths", kinds.whole(4, MAX_LENGTH), part) for part in value)
     if list(lengths) != sorted(set(lengths)):
         raise InputError(f"{where}: lengths = {value}: must rise, without repeats")
     return lengths
