@@ -195,6 +195,85 @@ def cloud(**options: Any) -> int:
 
 
 @cli.command(
+    short_help="Critical temperature and entropy, along an axis.",
+    help=_example(
+        "Example: gutz critical scans/counterflow-cubic.toml --order antipair\n\n"
+        "Critical temperature and entropy per particle of pairs, anti-pairs or single atoms.\n\n"
+        "Runs along the one axis without a value (temperatures do not count). With --out, a figure as well."
+    ),
+)
+@_FILE
+@_SET
+@_AT
+@click.option(
+    "--order", type=click.Choice(["single", "pair", "antipair"]), default="antipair", show_default=True,
+    help="What orders: single atoms (superfluid), pairs (paired), anti-pairs (counterflow).",
+)  # fmt: skip
+@_out("Write critical.nc and a figure into this folder.")
+@_JSON
+@_QUIET
+@_FORCE
+@_DEBUG
+def critical(**options: Any) -> int:
+    """Critical temperature."""
+    _load_numerics(quiet=options["quiet"])
+    from gutz.commands import critical as command
+
+    return command.run(**options)
+
+
+@cli.command(
+    short_help="One point from tubes to planes to the cube.",
+    help=_example(
+        "Example: gutz ladder scans/counterflow-cubic.toml --at t=0.02 --at T=0.01\n\n"
+        "One point with hopping switched on along x, y and z in turn, product beside dressed.\n\n"
+        "Axes of the file need a value each; the hopping is that along x. With --out, a figure as well."
+    ),
+)
+@_FILE
+@_SET
+@_AT
+@click.option("--steps", default=5, show_default=True, help="Rungs from one whole dimension to the next.")
+@_out("Write a figure into this folder.")
+@_JSON
+@_QUIET
+@_FORCE
+@_DEBUG
+def ladder(**options: Any) -> int:
+    """Ladder of dimensions."""
+    _load_numerics(quiet=options["quiet"])
+    from gutz.commands import ladder as command
+
+    return command.run(**options)
+
+
+@cli.command(
+    short_help="What the noise picture of a point shows.",
+    help=_example(
+        "Example: gutz noise scans/counterflow-cubic.toml --at t=0.02 --at T=0.001 --size 16\n\n"
+        "Noise correlations of momenta at one point: peaks and lines, what each means, how far to trust them.\n\n"
+        "Axes of the file need a value each. With --out, the maps (netCDF) and a figure as well."
+    ),
+)
+@_FILE
+@_SET
+@_AT
+@click.option("--size", default="32", show_default=True, metavar="SITES", help="Sites per direction: 32, or 64x64x16.")
+@click.option("--log", is_flag=True, help="Logarithmic scales in the figure.")
+@_out("Write noise.nc and a figure into this folder.")
+@_JSON
+@_QUIET
+@_FORCE
+@_DEBUG
+def noise(**options: Any) -> int:
+    """Noise correlations."""
+    _load_numerics(quiet=options["quiet"])
+    from gutz.commands import noise as command
+
+    return command.run(**options)
+
+
+@cli.command(
     short_help="Check a file and estimate the work.",
     help=_example(
         "Example: gutz check scans/rubidium-cubic.toml\n\n"

@@ -14,7 +14,7 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 
-from gutz import limits, precision, targets
+from gutz import limits, precision, sensitivity, targets
 from gutz.ansatz import descent, gibbs, product
 from gutz.batch import CUTOFF_WEIGHT
 from gutz.compiled import compiled
@@ -53,10 +53,8 @@ def solve(mixture: Mixture, ansatz: str = "product") -> Solution:
     if ansatz not in ANSATZE:
         raise InputError(f"ansatz is {ansatz!r}; it must be one of: {', '.join(ANSATZE)}")
     flat = mixture.flat()
-    if ansatz != "product" and any(isinstance(v, jax.core.Tracer) for v in jax.tree.leaves(flat)):
-        raise InputError(
-            f"ansatz is {ansatz!r}; only 'product' can be differentiated or used inside jax.jit and jax.vmap"
-        )
+    if ansatz == "dressed":
+        sensitivity.check_first_order(flat)
     concrete = flat.map(_number_behind)
     if any(isinstance(v, jax.core.Tracer) for v in jax.tree.leaves(concrete)):
         outputs, fields = _solve_inside_jit(flat)
@@ -64,7 +62,10 @@ def solve(mixture: Mixture, ansatz: str = "product") -> Solution:
         values = concrete.map(np.asarray)
         outputs, fields = _solve_numbers(values, ansatz)
         if any(isinstance(v, jax.core.Tracer) for v in jax.tree.leaves(flat)):
-            outputs = _attach_derivatives(flat, values, outputs, fields)
+            if ansatz == "product":
+                outputs = _attach_derivatives(flat, values, outputs, fields)
+            else:
+                outputs = sensitivity.attach(flat, values, outputs, lambda near: _solve_numbers(near, ansatz)[0])
     shaped = {name: v.reshape(mixture.shape + v.shape[1:]) for name, v in outputs.items()}
     return Solution(mixture, shaped, fields.reshape(mixture.shape + fields.shape[1:]), ansatz)
 

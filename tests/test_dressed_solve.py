@@ -1,11 +1,9 @@
 """The dressed ansatz through the public door: paired and counterflow phases, drag, couplings, what is refused."""
 
-import jax
 import numpy as np
 import pytest
 
 import gutz
-from gutz.errors import InputError
 from gutz.phases import Phase
 from gutz.status import Status
 
@@ -64,8 +62,3 @@ def test_dataset_has_the_dressing_and_no_residual(counterflow):
     ds = counterflow.to_dataset()
     assert "dressing" in ds and "residual" not in ds
     assert ds.attrs["ansatz"] == "dressed"
-
-
-def test_derivatives_through_the_dressed_state_are_refused():
-    with pytest.raises(InputError, match="only 'product' can be differentiated"):
-        jax.grad(lambda t: gutz.solve(gutz.Mixture(t=t, U=1.0, mu=0.3, n_max=3), "dressed").free_energy)(0.02)
