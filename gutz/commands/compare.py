@@ -210,7 +210,8 @@ def _print_flags(ansatz: str, bits: int, sites: float | None) -> None:
 def _cell(error: float, code: int) -> str:
     if code == Verdict.NOT_JUDGED or np.isnan(error):
         return verdicts.WORDS[Verdict.NOT_JUDGED]
-    shown = "over 1000 %" if error > 10 else f"{100 * error:.3g} %"
+    shown = "over 1000 %" if error > 10 else "below 0.1 %" if error < 1e-3 else f"{100 * error:.2g} %"
+    shown = f"{100 * error:.0f} %" if 1 <= error <= 10 else shown
     return f"{shown} {verdicts.WORDS[Verdict(code)]}"
 
 

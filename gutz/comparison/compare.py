@@ -140,8 +140,9 @@ def _of_solutions(every: dict[int, References], solutions: dict[str, Solution], 
     """Interpolated errors at the points of a mixture, dims (point, ansatz, observable)."""
     first = next(iter(solutions.values()))
     mixture = first.mixture
-    found = {name: predictions.outputs(solution) for name, solution in solutions.items()}
     size = int(np.prod(mixture.shape, dtype=int))
+    noise = np.full(size, predictions.NOISE_SITES)
+    found = {name: predictions.outputs(solution, noise) for name, solution in solutions.items()}
     t = np.asarray(mixture.t)[..., 0].reshape(size, mixture.species)
     U = np.asarray(mixture.U).reshape(size, mixture.species)
     U12 = np.asarray(mixture.U12).reshape(size)

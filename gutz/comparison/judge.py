@@ -129,7 +129,7 @@ def _predictions(references: References, ansatz: str, kept: Path | None) -> list
     missing = np.array([number for number, identity in enumerate(identities) if identity not in held], dtype=int)
     fresh: dict[int, dict[str, Any]] = {}
     if missing.size:
-        solved = predictions.solve_places(references.places[missing], ansatz)
+        solved = predictions.solve_places(references.places[missing], ansatz, references.noise[missing])
         fresh = {
             int(number): {name: values[row] for name, values in solved.items()} for row, number in enumerate(missing)
         }

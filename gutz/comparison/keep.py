@@ -16,7 +16,7 @@ def keep() -> None:
     identities = [str(dataset.attrs["identity"]) for some in every.values() for dataset in some.datasets]
     found = {}
     for ansatz in ANSATZE:
-        parts = [predictions.solve_places(some.places, ansatz) for some in every.values()]
+        parts = [predictions.solve_places(some.places, ansatz, some.noise) for some in every.values()]
         found[ansatz] = {
             name: np.concatenate([_both_species(part[name], len(dims)) for part in parts])
             for name, dims in predictions.OUTPUTS.items()

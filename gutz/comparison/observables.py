@@ -112,17 +112,19 @@ def measured(entry: Entry, dataset: xr.Dataset) -> Measured:
 
 
 def peaks(noise: Floats) -> dict[str, Floats]:
-    """Peak weights of normal-ordered noise maps, shape (species, species, k, k'): means along k' = -k and k' = k.
+    """Peak weights of normal-ordered noise maps, shape (..., species, species, k, k'): means along k' = -k and k' = k.
 
-    k = 0 and the zone edge, where both lines meet or a condensate sits, are left out.
+    Momenta from pi/4 to 3 pi/4 either way only: around k = 0 sits the condensate, whose shape in an open chain reaches
+    over several momenta, and at the zone edge both lines meet.
     """
     sites = noise.shape[-1]
-    k = np.setdiff1d(np.arange(1, sites), [sites // 2] if sites % 2 == 0 else [])
-    along, across = noise[..., k, k], noise[..., k, -k % sites]
-    both = np.arange(noise.shape[0])
-    found = {"bunching_peak": along.mean(-1)[both, both]}
-    if noise.shape[0] == 2:
-        found |= {"pair_peak": across.mean(-1)[0, 1], "antipair_peak": along.mean(-1)[0, 1]}
+    k = np.arange(sites)
+    k = k[np.abs(np.minimum(k, sites - k) / sites - 0.25) <= 0.125 + 1e-9]
+    along, across = noise[..., k, k].mean(-1), noise[..., k, -k % sites].mean(-1)
+    both = np.arange(noise.shape[-3])
+    found = {"bunching_peak": along[..., both, both]}
+    if noise.shape[-3] == 2:
+        found |= {"pair_peak": across[..., 0, 1], "antipair_peak": along[..., 0, 1]}
     return found
 
 
@@ -136,6 +138,7 @@ def predicted(found: Mapping[str, NDArray[Any]], T: float) -> dict[str, Floats]:
         "number_variance": variance[both, both],
         "coherence": found["coherence"][:species],
         "one_body_far": found["condensate"][:species],
+        "bunching_peak": found["bunching_peak"][:species],
         "phase": found["phase"],
     }
     if T > 0:
@@ -147,6 +150,8 @@ def predicted(found: Mapping[str, NDArray[Any]], T: float) -> dict[str, Floats]:
             "number_covariance": variance[0, 1],
             "pair_far": found["pair_order"] ** 2,
             "antipair_far": found["antipair_order"] ** 2,
+            "pair_peak": found["pair_peak"],
+            "antipair_peak": found["antipair_peak"],
         }
         if T == 0:
             said |= {"pair_exponent": found["exponent_pair"], "antipair_exponent": found["exponent_antipair"]}

@@ -16,12 +16,15 @@ import xarray as xr
 from numpy.typing import NDArray
 
 from gutz import __version__
+from gutz.comparison.observables import peaks
 from gutz.comparison.places import Places
 from gutz.errors import OutputError
 from gutz.model import Mixture
+from gutz.noise import noise_map
 from gutz.order import by_dimension
 from gutz.reference.store import ENGINE
 from gutz.scan.paths import replace_durably
+from gutz.solution import Solution
 from gutz.solver import ANSATZE, solve
 from gutz.status import Status
 
@@ -44,10 +47,16 @@ OUTPUTS: dict[str, tuple[str, ...]] = {
     "exponent_antipair": (),
     "coherence_length": ("species",),
     "dressing": (),
+    "bunching_peak": ("species",),
+    "pair_peak": (),
+    "antipair_peak": (),
     "phase": (),
     "status": (),
 }
 """What is kept of a solution, along x, and its dimensions after the point."""
+
+NOISE_SITES = 24
+"""Length of the chain whose noise map is taken where no reference says otherwise."""
 
 _N_MAX = {1: 12, 2: 4}
 """Cutoff of soft-core chains, by number of species; all stored fillings are below 1.3 per species (2 with one)."""
@@ -59,8 +68,11 @@ _GAP_FILLING = 1e-3
 """A state at a jump in the filling that has the wanted filling to this accuracy keeps the label of its own order."""
 
 
-def solve_places(places: Places, ansatz: str) -> dict[str, NDArray[Any]]:
-    """Solve every point at its filling and temperature; arrays (points, ...) by the names of `OUTPUTS`."""
+def solve_places(places: Places, ansatz: str, noise: NDArray[np.int64]) -> dict[str, NDArray[Any]]:
+    """Solve every point at its filling and temperature; arrays (points, ...) by the names of `OUTPUTS`.
+
+    noise: length of the chain whose noise map each point is compared with, 0 for none, shape (points,).
+    """
     found = {name: np.full((places.size, *(places.species for _ in dims)), np.nan) for name, dims in OUTPUTS.items()}
     known = _known_mu(places)
     todo = np.arange(places.size)
@@ -69,7 +81,7 @@ def solve_places(places: Places, ansatz: str) -> dict[str, NDArray[Any]]:
             where = todo[(places.hard_core[todo] == hard) & (np.isfinite(known[todo]) | (not by_mu))]
             if where.size:
                 mixture = _mixture(places[where], known[where] if by_mu else None)
-                solved = outputs(solve(mixture, ansatz=ansatz), cold=places.T[where] == 0)
+                solved = outputs(solve(mixture, ansatz=ansatz), noise[where], cold=places.T[where] == 0)
                 for name, values in solved.items():
                     found[name][where] = values
         missed = np.abs(found["filling"] - places.filling).max(-1) > _GAP_FILLING
@@ -107,9 +119,12 @@ def _mixture(places: Places, mu: Floats | None) -> Mixture:
     )
 
 
-def outputs(solution: Any, cold: NDArray[np.bool_] | None = None) -> dict[str, NDArray[Any]]:
+def outputs(
+    solution: Solution, noise: NDArray[np.int64], cold: NDArray[np.bool_] | None = None
+) -> dict[str, NDArray[Any]]:
     """The kept outputs of a solution in one dimension, shape (points, ...); nan for what the ansatz lacks.
 
+    noise: as in `solve_places`.
     A state at a jump in the filling that has the filling asked for is named by its order, not by the jump. cold: points
     whose order is to be read as at T = 0.
     """
@@ -117,6 +132,7 @@ def outputs(solution: Any, cold: NDArray[np.bool_] | None = None) -> dict[str, N
     given = {
         name: np.asarray(values).reshape(-1, *np.shape(values)[lead:]) for name, values in solution.outputs.items()
     }
+    given |= _peaks(solution, noise)
     found = {name: given.get(name, np.full(flat.shape, np.nan)) for name in OUTPUTS}
     found["coherence"] = found["coherence"][..., 0]
     again = np.zeros(flat.shape, bool) if cold is None else cold & (given["T"] > 0)
@@ -132,6 +148,19 @@ def outputs(solution: Any, cold: NDArray[np.bool_] | None = None) -> dict[str, N
                 found[name] = np.array(found[name])
                 found[name][again] = values
     return {name: np.asarray(values, dtype=float) for name, values in found.items()}
+
+
+def _peaks(solution: Solution, noise: NDArray[np.int64]) -> dict[str, NDArray[Any]]:
+    """Peak weights of the noise maps of all points, by the names of `OUTPUTS`."""
+    species, size = solution.mixture.species, noise.size
+    found: dict[str, NDArray[Any]] = {"bunching_peak": np.full((size, species), np.nan)}
+    found |= {name: np.full(size, np.nan) for name in ("pair_peak", "antipair_peak")}
+    for sites in np.unique(noise[noise > 0]):
+        at = np.flatnonzero(noise == sites)
+        whole = noise_map(solution, size=int(sites), full=True)["noise"].values
+        for name, values in peaks(whole.reshape(size, *whole.shape[-4:])[at]).items():
+            found[name][at] = values
+    return found
 
 
 def write(path: Path, identities: Sequence[str], found: Mapping[str, Mapping[str, NDArray[Any]]]) -> None:

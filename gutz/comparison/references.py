@@ -40,6 +40,11 @@ class References:
         """Names, in order."""
         return [entry.name for entry in self.entries]
 
+    @property
+    def noise(self) -> NDArray[np.int64]:
+        """Lengths of the chains whose noise maps are stored, 0 without one."""
+        return np.array([entry.noise_length for entry in self.entries], dtype=np.int64)
+
     def weights(self, points: Places) -> tuple[Floats, Floats]:
         """Distances (points, entries), and weights 1/d^2 of those nearby, summing to 1; all nan with none nearby.
 

@@ -141,7 +141,9 @@ def _two_species(panel: Axes, stored: xr.Dataset) -> None:
     alike = (np.abs(stored["filling_1"] - 0.5) < 1e-9) & (np.abs(stored["filling_2"] - 0.5) < 1e-9)
     some = stored.isel(entry=np.flatnonzero((soft & alike & (stored["t2_over_t"] == 1)).values))
     error = some["overall_error"].values
-    t_axis = np.linspace(max(_TWO["t"][0], 2e-3), _TWO["t"][1], _GRID)
+    x, y = 1 / some["U_over_t"].values, some["U12_over_t"].values / some["U_over_t"].values
+    widest = min(_TWO["t"][1], 1.4 * max(x, default=0.1))
+    t_axis = np.linspace(max(_TWO["t"][0], 2e-3), widest, _GRID)
     y_axis = np.linspace(*_TWO["y"], _GRID)
     gx, gy = np.meshgrid(t_axis, y_axis)
     values = np.full(gx.shape, np.nan)
@@ -150,14 +152,13 @@ def _two_species(panel: Axes, stored: xr.Dataset) -> None:
                         _half_filled(some["U_over_t"].values, some["U12_over_t"].values))  # fmt: skip
         values = _shepard(far, error).reshape(gx.shape)
     _shade(panel, t_axis, y_axis, values)
-    x, y = 1 / some["U_over_t"].values, some["U12_over_t"].values / some["U_over_t"].values
     _points(panel, x, y, error, some["overall"].values)
     phases = some["reference"].sel(observable="phase").values
     for phase, place in ((Phase.COUNTERFLOW, 0.93), (Phase.PAIRED, -0.93), (Phase.SUPERFLUID, 0.12)):
         if (phases == phase).any():
-            _name(panel, 0.175, place, WORDS[phase])
+            _name(panel, 0.6 * widest, place, WORDS[phase])
     panel.axhline(0, color=style.PALE_INK, lw=0.6, zorder=3)
-    panel.set(xlim=_TWO["t"], ylim=_TWO["y"], xlabel="t / U", ylabel="Between the species: U12 / U")
+    panel.set(xlim=(0, widest), ylim=_TWO["y"], xlabel="t / U", ylabel="Between the species: U12 / U")
 
 
 def _half_filled(strength: Floats, cross: Floats) -> Places:

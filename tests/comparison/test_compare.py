@@ -150,7 +150,7 @@ def test_stored_noise_maps_show_the_right_peak(every):
         some = picked(every[2], (name,))
         values = measured(some.entries[0], some.datasets[0]).values
         assert 0.25 > values[strong][0] > 0.04
-        assert abs(values[weak][0]) < 0.2 * values[strong][0]
+        assert abs(values[weak][0]) < 0.3 * values[strong][0]
 
 
 # --- mixtures and runs --------------------------------------------------------------------------------------
@@ -158,7 +158,9 @@ def test_stored_noise_maps_show_the_right_peak(every):
 
 @pytest.fixture(scope="module")
 def points():
-    mixture = gutz.Mixture(t=1.0, U=np.array([8.0, 7.0, 0.3]), filling=np.array([1.0, 1.0, 0.1]), dim=1, species=1, n_max=12)
+    mixture = gutz.Mixture(
+        t=1.0, U=np.array([8.0, 7.0, 0.3]), filling=np.array([1.0, 1.0, 0.1]), dim=1, species=1, n_max=12
+    )
     return gutz.compare(mixture, ansatz="product")
 
 
@@ -185,7 +187,9 @@ def test_far_from_references_nothing_is_claimed(points):
 
 
 def test_a_run_is_compared_point_by_point(points):
-    mixture = gutz.Mixture(t=1.0, U=np.array([8.0, 7.0, 0.3]), filling=np.array([1.0, 1.0, 0.1]), dim=1, species=1, n_max=12)
+    mixture = gutz.Mixture(
+        t=1.0, U=np.array([8.0, 7.0, 0.3]), filling=np.array([1.0, 1.0, 0.1]), dim=1, species=1, n_max=12
+    )
     solution = gutz.solve(mixture)
     run = solution.to_dataset(["U"], {"U": [8.0, 7.0, 0.3]}).assign_attrs(axes=["U"])
     run["t"] = (("U", "species", "direction"), np.ones((3, 1, 1)))
@@ -215,7 +219,7 @@ def test_unknown_ansatz():
 
 
 def test_places_that_miss_their_filling_are_flagged(every):
-    found = predictions.solve_places(every[1].places[:1], "product")
+    found = predictions.solve_places(every[1].places[:1], "product", np.array([0]))
     assert found["filling"][0, 0] == pytest.approx(1.0, abs=1e-3)
     assert int(found["status"][0]) & ~int(Status.PLATEAU) == 0
 
