@@ -27,6 +27,7 @@ from gutz.trap.cloud import Cloud
 from gutz.trap.loading import Margin
 
 NETCDF, PROFILES = "clouds.nc", "profiles.nc"
+_PHONONS = {True: "phonon entropy to one loop", False: "phonon entropy not included"}
 LEAST_SHARE = 5e-4
 """Phases with fewer of the atoms are not listed."""
 
@@ -107,6 +108,7 @@ def _print_one(plan: Plan, asked: CloudPoint, cloud: Cloud, margin: Margin | Non
     rows = [
         ("Temperature", number(cloud.T), unit),
         ("Entropy per particle", number(cloud.entropy_per_particle), "k_B"),
+        ("of it, collective modes", number(_collective(cloud)), "k_B"),
         ("Atoms", "  ".join(number(float(n), 6) for n in cloud.atoms), ""),
         ("Chemical potential", "  ".join(number(float(m)) for m in cloud.mu), unit),
         ("Highest filling", "  ".join(number(float(n), 4) for n in cloud.average("filling").max(0)), ""),
@@ -147,6 +149,13 @@ def _print_one(plan: Plan, asked: CloudPoint, cloud: Cloud, margin: Margin | Non
         console.say(f"{WORDS[margin.phase]}: {margin.fraction:.1%} of the atoms; {margin.words}")
 
 
+def _collective(cloud: Cloud) -> float:
+    """Entropy per particle of the collective modes; nan where not included."""
+    if cloud.phonons is None:
+        return float("nan")
+    return float(cloud.nodes.weight @ cloud.phonons) / float(cloud.atoms.sum())
+
+
 def _print_many(plan: Plan, table: xr.Dataset, phase: Phase | None) -> None:
     """A row per cloud: axes, T, entropy, filling, shares of the phases that occur."""
     flat = table.stack(cloud=table.attrs["axes"])
@@ -182,8 +191,8 @@ def _notes(solved: Sequence[Cloud], quiet: bool) -> None:
             counts[key] = counts.get(key, 0) + 1
     for words, count in counts.items():
         console.note(f"note: {words}" if len(solved) == 1 else f"note, {count} of {len(solved)}: {words}", quiet)
-    if any(cloud.T > 0 for cloud in solved):
-        console.note(f"note: phonon entropy {clouds.PHONONS}", quiet)
+    if any(cloud.T > 0 and cloud.phonons is None for cloud in solved):
+        console.note(f"note: phonon entropy {clouds.PHONONS[False]}", quiet)
 
 
 def _wordy(sentence: str) -> str:
@@ -233,7 +242,7 @@ def _write(
     heat = f"S/N = {cloud.entropy_per_particle:.3g} k_B"
     if asked[middle].lattice is not None:
         heat += f", T = {clouds.nanokelvin(asked[middle], cloud):.3g} nK"
-    small = f"{plan.spec.ansatz.kind} ansatz, local density, {heat}; phonon entropy not included"
+    small = f"{plan.spec.ansatz.kind} ansatz, local density, {heat}, {_PHONONS[cloud.phonons is not None]}"
     axes = cloud.trap.axes
     plane = None if axes < 2 else profiles.section(cloud, (0, axes - 1))
     columns = None if axes < 2 else profiles.column_density(cloud, along=1 if axes == 3 else -1)
@@ -244,6 +253,6 @@ def _write(
     long = [axis.name for axis in plan.axes if axis.values.size > 1]
     if len(long) == 1:
         curve = table.isel({axis.name: 0 for axis in plan.axes if axis.values.size == 1})
-        facts = f"{plan.spec.ansatz.kind} ansatz, local density, adiabatic; phonon entropy not included"
+        facts = f"{plan.spec.ansatz.kind} ansatz, local density, adiabatic, {_PHONONS[solved[0].phonons is not None]}"
         made += plots.save(figures.loading(curve, long[0], facts), paths.inside(folder, "loading"))
     return made

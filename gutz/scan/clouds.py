@@ -207,17 +207,18 @@ def table(
         "ansatz": plan.spec.ansatz.kind,
         "dim": plan.spec.dim,
         "energy_unit": unit,
-        "phonon_entropy": PHONONS,
+        "phonon_entropy": PHONONS[all(cloud.phonons is not None for cloud in clouds)],
         "wanted": plan.spec.trap.wanted or "" if plan.spec.trap else "",
     }
     return xr.Dataset(data, coords=coords, attrs=attrs)
 
 
-PHONONS = (
-    "not included: the entropy is that of single sites, which is activated; a superfluid's phonons would take up "
-    "entropy, and the lattice comes out hotter than it is"
-)
-"""What the entropy leaves out."""
+PHONONS = {
+    True: "included: one loop around the product state, at its density",
+    False: "not included: the entropy is that of single sites, which is activated; a superfluid's phonons would take "
+    "up entropy, and the lattice comes out hotter than it is",
+}
+"""What the entropy holds of the collective modes."""
 
 _COLUMNS: dict[str, tuple[tuple[str, ...], str, str]] = {
     "T": ((), ENERGY, "Temperature"),

@@ -20,10 +20,11 @@ from gutz.trap.climb import Climbed, Sums, climb
 from gutz.trap.geometry import Nodes, Trap
 from gutz.trap.local import LocalGas, States
 from gutz.trap.mesh import Mesh, mesh_of, total
+from gutz.trap.phonons import PhononLaw, entropy_at_nodes
 
 FloatArray = NDArray[np.float64]
 
-TOLERANCE = {"product": 5e-4, "dressed": 5e-3}
+TOLERANCE = {"product": 1e-3, "dressed": 5e-3}
 """Relative error of atom numbers and entropy from the spacing of the nodes, per ansatz."""
 
 CUTOFF_SHARE = 1e-3
@@ -44,6 +45,10 @@ node crossing the border of a shell."""
 
 _ROUNDS = 12
 
+_MOST_REPEATS = 8
+_MODES_MET = 4e-3
+"""Entropy of the collective modes, relative to the whole, at which it agrees with what was assumed."""
+
 
 @dataclass(frozen=True, eq=False)
 class Cloud:
@@ -52,7 +57,8 @@ class Cloud:
     mu: chemical potentials at the bottom of each species' trap, (species,); T: temperature. nodes: potentials and
     weights. sides, shares: the local states at the nodes and the share of each (one, unless phases coexist).
     error: estimated relative error of (N_1, .., S). status: bits of `gutz.status.Status`. coexist: two phases side by
-    side. notes: sentences for people.
+    side. phonons: entropy per site of the collective modes at the nodes, None where not included.
+    law: how their sum goes with T, as far as it was followed. notes: sentences for people.
     """
 
     gas: LocalGas
@@ -65,6 +71,8 @@ class Cloud:
     error: FloatArray
     status: Status
     coexist: bool
+    phonons: FloatArray | None
+    law: PhononLaw | None
     notes: tuple[str, ...]
 
     @property
@@ -84,7 +92,8 @@ class Cloud:
 
     def average(self, name: str) -> FloatArray:
         """A local output at every node, averaged over coexisting sides; first axis the node."""
-        return np.asarray(sum(x * s.outputs[name] for x, s in zip(self.shares, self.sides, strict=True)))
+        mean = np.asarray(sum(x * s.outputs[name] for x, s in zip(self.shares, self.sides, strict=True)))
+        return mean + self.phonons if name == "entropy" and self.phonons is not None else mean
 
     def phases(self) -> NDArray[np.int8]:
         """Label at every node; SEPARATED where coexisting sides hold clearly different densities."""
@@ -100,7 +109,8 @@ class Cloud:
         for x, side in zip(self.shares, self.sides, strict=True):
             for code in np.unique(side.outputs["phase"]):
                 here = np.where(side.outputs["phase"] == code, self.nodes.weight, 0.0) * x
-                atoms, entropy = here @ side.outputs["filling"], float(here @ side.outputs["entropy"])
+                local = side.outputs["entropy"] + (0.0 if self.phonons is None else self.phonons)
+                atoms, entropy = here @ side.outputs["filling"], float(here @ local)
                 before = found.get(Phase(int(code)), (np.zeros_like(atoms), 0.0))
                 found[Phase(int(code))] = (before[0] + atoms, before[1] + entropy)
         return found
@@ -120,6 +130,7 @@ class _Problem:
     goal: FloatArray
     free: NDArray[np.bool_]
     tolerance: float
+    law: PhononLaw | None = None
 
     @property
     def asked(self) -> float:
@@ -140,7 +151,8 @@ class _Problem:
         bearable = max(accuracy, self.tolerance) * self.size()
 
         def sums(at: FloatArray) -> Sums:
-            return total(nodes, at, self.gas(at[:-1] - nodes.potential, float(at[-1])))
+            found = total(nodes, at, self.gas(at[:-1] - nodes.potential, float(at[-1])))
+            return found if self.law is None else self.law.added(found)
 
         scale = self.gas.scale
         return climb(sums, y, self.goal, self.free, accuracy * self.size(), bearable, scale, COLDEST * scale)
@@ -156,11 +168,13 @@ def solve_cloud(
     guess: FloatArray | None = None,
     near: Cloud | None = None,
     tolerance: float | None = None,
+    phonons: bool = True,
 ) -> Cloud:
     """Find the cloud with the given atom numbers (species,) and T, or entropy per particle (k_B).
 
     guess: (mu_1, .., T) to start from. near: a similar cloud, whose nodes then serve again.
-    tolerance: relative error allowed from the spacing of the nodes.
+    tolerance: relative error allowed from the spacing of the nodes. phonons: count the entropy of the collective modes
+    as well (product ansatz only; the dressed one leaves it out).
     Raises InputError for numbers that make no sense, or a trap too tight for the local-density approximation.
     """
     atoms = _checked_atoms(gas, trap, atoms)
@@ -180,18 +194,36 @@ def solve_cloud(
     reused = None
     if near is not None and (near.nodes.line is None) == (trap.ratio is None or trap.size is not None):
         reused = problem.mesh.again(near.nodes, np.append(near.mu, near.T), y)
-    frozen = False
-    while True:
+    counted = phonons and gas.ansatz == "product"
+    if counted and problem.free[-1] and near is not None and near.phonons is not None and near.T > 0:
+        amplitude = float(near.nodes.weight @ near.phonons) * atoms.sum() / near.atoms.sum()
+        power = near.law.power if near.law is not None else 3.0
+        problem = replace(problem, law=PhononLaw(amplitude, near.T * gas.scale / near.gas.scale, power, foreign=True))
+    frozen, modes = False, None
+    for _ in range(_MOST_REPEATS):
         nodes, climbed, error = _solve(problem, y, reused)
-        reused, y = None, climbed.sides[0].y
+        best = climbed.sides[0]
+        reused, y = None, best.y
         if problem.free[-1] and not climbed.met and y[-1] <= 1.01 * COLDEST * gas.scale:
             frozen = True
-            problem = replace(problem, free=np.append(np.ones(gas.species, bool), False))
+            problem = replace(problem, free=np.append(np.ones(gas.species, bool), False), law=None)
             nodes, climbed, error = _solve(problem, y)
+            best = climbed.sides[0]
         heavy = _cutoff_share(nodes, climbed, gas.n_max)
-        if heavy <= CUTOFF_SHARE or not gas.raise_cutoff():
+        if heavy > CUTOFF_SHARE and gas.raise_cutoff():
+            continue
+        if not counted:
             break
-    return _finish(problem, trap, nodes, climbed, error, heavy, frozen)
+        modes = entropy_at_nodes(gas, nodes, best.states, best.y[:-1], float(best.y[-1]))
+        if not problem.free[-1] or problem.goal[-1] == 0:
+            break
+        amplitude, T = float(nodes.weight @ modes), float(y[-1])
+        law = problem.law or PhononLaw(0.0, T)
+        if abs(amplitude - law.entropy(T)) <= _MODES_MET * problem.goal[-1]:
+            break
+        problem = replace(problem, law=law.through(T, amplitude))
+        reused = problem.mesh.again(nodes, y, y)
+    return _finish(problem, trap, nodes, climbed, error, heavy, frozen, modes)
 
 
 def first_guess(gas: LocalGas, trap: Trap, atoms: FloatArray, T: float | None) -> FloatArray:
@@ -238,19 +270,23 @@ def _solve(problem: _Problem, y: FloatArray, reused: Nodes | None = None) -> tup
     reused: refined nodes of a similar cloud, which spare the coarse ones.
     """
     mesh = problem.mesh
-    nodes = mesh.coarse(y) if reused is None else reused
-    for _ in range(_ROUNDS):
-        climbed = problem.climb(nodes, y, _ROUGH if reused is None else _MET)
-        y = climbed.sides[0].y
-        if not mesh.overflows(nodes, climbed.sides[0].states):
-            break
-        nodes, reused = mesh.coarse(y), None
     if reused is None:
+        nodes = mesh.coarse(y)
+        for _ in range(_ROUNDS):
+            climbed = problem.climb(nodes, y, _ROUGH)
+            y = climbed.sides[0].y
+            if not mesh.overflows(nodes, climbed.sides[0].states):
+                break
+            nodes = mesh.coarse(y)
         nodes = mesh.fine(y, problem.tolerance * problem.size(climbed.sides[0].totals[-1]))
+    else:
+        nodes = reused
     for _ in range(_ROUNDS):
         climbed = problem.climb(nodes, y, _MET)
         best = climbed.sides[0]
         y = best.y
+        if reused is not None and mesh.overflows(nodes, best.states):
+            return _solve(problem, y)
         allowed = problem.tolerance * problem.size(best.totals[-1])
         error = mesh.error(nodes, best)
         if np.all(error <= 2.0 * allowed) or mesh.exhausted(nodes):
@@ -267,7 +303,14 @@ def _cutoff_share(nodes: Nodes, climbed: Climbed, n_max: int) -> float:
 
 
 def _finish(
-    problem: _Problem, trap: Trap, nodes: Nodes, climbed: Climbed, error: FloatArray, heavy: float, frozen: bool
+    problem: _Problem,
+    trap: Trap,
+    nodes: Nodes,
+    climbed: Climbed,
+    error: FloatArray,
+    heavy: float,
+    frozen: bool,
+    modes: FloatArray | None,
 ) -> Cloud:
     """Name what is special about the result."""
     gas, best = problem.gas, climbed.sides[0]
@@ -303,7 +346,21 @@ def _finish(
     if np.any(error > 3.0 * problem.tolerance):
         notes.append(f"the finest nodes used leave an error of about {error.max():.1%} in numbers or entropy")
     notes += tight(trap, gas, best.y, nodes)
-    return Cloud(gas, trap, best.y[:-1].copy(), T, nodes, sides, climbed.shares, error, status, coexist, tuple(notes))
+    return Cloud(
+        gas,
+        trap,
+        best.y[:-1].copy(),
+        T,
+        nodes,
+        sides,
+        climbed.shares,
+        error,
+        status,
+        coexist,
+        modes,
+        problem.law,
+        tuple(notes),
+    )
 
 
 def tight(trap: Trap, gas: LocalGas, y: FloatArray, nodes: Nodes) -> list[str]:

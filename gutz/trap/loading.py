@@ -118,14 +118,15 @@ def heating_margin(cloud: Cloud, phase: Phase, hint: float | None = None) -> Mar
             inner = middle
         else:
             outer = middle
-    critical = 0.5 * (inner.entropy_per_particle + outer.entropy_per_particle)
+    last = _at_T(inner, float(np.sqrt(max(inner.T, coldest) * max(outer.T, coldest))), cloud.phonons is not None)
+    critical = last.entropy_per_particle
     margin = critical - cloud.entropy_per_particle
     words = (
         f"it bears {margin:.3g} k_B per atom of heating before less than {PRESENT:.0%} of the atoms are in it"
         if present
         else f"it is absent, and appears when the entropy is lower by {-margin:.3g} k_B per atom"
     )
-    return Margin(phase, fraction, critical, 0.5 * (inner.T + outer.T), margin, words)
+    return Margin(phase, fraction, critical, last.T, margin, words)
 
 
 def _bracket(cloud: Cloud, phase: Phase, present: bool, hint: float | None) -> tuple[Cloud, Cloud] | None:
@@ -147,9 +148,11 @@ def _bracket(cloud: Cloud, phase: Phase, present: bool, hint: float | None) -> t
     return None
 
 
-def _at_T(near: Cloud, T: float) -> Cloud:
-    guess = np.append(near.mu, T)
-    return solve_cloud(near.gas, near.trap, near.atoms, T=T, guess=guess, near=near, tolerance=_MARGIN_TOLERANCE)
+def _at_T(near: Cloud, T: float, phonons: bool = False) -> Cloud:
+    """A cloud of other temperature. Collective modes do not change which phases there are, only the entropy."""
+    guess, tolerance = np.append(near.mu, T), _MARGIN_TOLERANCE
+    atoms = near.atoms
+    return solve_cloud(near.gas, near.trap, atoms, T=T, guess=guess, near=near, tolerance=tolerance, phonons=phonons)
 
 
 def _never(phase: Phase, fraction: float, present: bool) -> Margin:
