@@ -13,7 +13,7 @@ from typing import Any, NamedTuple
 import numpy as np
 
 from gutz.ansatz import bond, dressed, evaluate, families
-from gutz.ansatz.dressed import Sites
+from gutz.ansatz.dressed import Look, Sites
 from gutz.ansatz.families import Family
 from gutz.ansatz.selection import DressedMinimum
 from gutz.fock import local_space
@@ -135,7 +135,7 @@ def _group(
         along[site, :, site] = [families.spread(name, species)[held] for name in used]
     along = along.reshape(-1, sublattices, len(names))
     x, lam = np.ascontiguousarray(state.fields[index][..., held]), state.lam[index]
-    look = evaluate.look(p, x, lam, f=f, names=names, cold=cold)
+    look = Look(*(v[index] for v in state.look))
     number = local_space(n_max, species).number
     second, step = _responses(p, number, x, lam, along, f, names, cold=cold)
 

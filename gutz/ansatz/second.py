@@ -5,7 +5,7 @@ Out: `Second`, numpy arrays. The formulas are those at the top of `gutz.ansatz.b
      differentiate; here nothing is compiled and what is zero is left out:
 
 - pairs of levels that no operator connects, where the frame has blocks;
-- early levels so high that exp(-E β/2) < 1e-13: time runs over (0, β/2), so each of them is weighted by less.
+- early levels so high that exp(-E β/2) < 1e-11: time runs over (0, β/2), so each of them is weighted by less.
 """
 
 from collections.abc import Callable
@@ -21,8 +21,8 @@ from gutz.ansatz.gibbs import Levels
 
 Floats = NDArray[np.float64]
 
-_NEGLIGIBLE = 60.0
-"""Energy above the lowest level, in units of T, from which exp(-E/2T) < 1e-13."""
+NEGLIGIBLE = 52.0
+"""Energy above the lowest level, in units of T, from which exp(-E/2T) < 1e-11."""
 
 _TINY = 1e-12
 
@@ -144,7 +144,7 @@ def _warm(lv: Levels, ops: Floats, factor: Floats, f: Frame, nodes: int) -> tupl
     tau, w = times(beta, energy.max((-1, -2)), nodes)
     kept = energy.shape[-1]
     if len(f.blocks) == 1:  # sorted by energy
-        kept = int((energy * beta[:, None, None] < _NEGLIGIBLE).sum(-1).max())
+        kept = int((energy * beta[:, None, None] < NEGLIGIBLE).sum(-1).max())
     minus = -energy[..., None]
     late = np.exp(minus * tau[:, None, None, :])
     total = np.exp(-energy * beta[:, None, None]).sum(-1)
@@ -182,7 +182,7 @@ class _Dense:
         self.X = X.reshape(points, sites, -1, d)
         self.by_early = (self.X @ late).reshape(points, sites, -1, kept, nodes)
         self.by_early *= early[:, :, None]
-        self.C = self.by_early.sum(-2)
+        self.C = np.einsum("...cmt->...ct", self.by_early)
         self.equal = (X @ np.repeat(weight[..., :kept], d, axis=-1)[..., None])[..., 0]
 
     def back(self, slope: "_Slope", D: Floats, tau: Floats, beta: Floats) -> None:
@@ -326,10 +326,11 @@ class _Slope:
             g = np.einsum("...adp,...dp->...ap", shared, at)
         else:
             n = len(channel.operators)
-            g = np.zeros((*sensitivity.shape[:2], n, sensitivity.shape[-1]))
+            g = sensitivity[:, :, :n] * at[:, :, :1]
             for A, begin in enumerate(channel.begins):
                 row = sensitivity[:, :, begin : begin + n - A]
-                g[:, :, A:] += row * at[:, :, A : A + 1]
+                if A:
+                    g[:, :, A:] += row * at[:, :, A : A + 1]
                 g[:, :, A] += np.einsum("...dp,...dp->...p", row, at[:, :, A:])
         out_shape = (*g.shape[:-1], self.kept, self.shape[-1])
         if not channel.rows.size:

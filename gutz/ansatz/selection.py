@@ -5,8 +5,10 @@ Out: `DressedMinimum`, numpy arrays over the points: the state, its fields and a
 The rules of acceptance are those at the top of `gutz.ansatz.families`.
 """
 
+from functools import partial
 from typing import Any, NamedTuple
 
+import jax
 import numpy as np
 
 from gutz.ansatz import bond, descent, dressed, evaluate, families, product
@@ -25,6 +27,12 @@ _HOTTEST = 2.0
 """Pair and anti-pair order is not looked for above this temperature, in units of n_max times the exchange energy: the
 mean-field transition is at the exchange energy for one atom per site and grows with the filling."""
 
+_PROBE = 0.3
+_STABLE = 0.2
+"""Pair and anti-pair fields are tried unless the normal state in a field of `_PROBE` times its natural size is pulled
+back with at least `_STABLE` of the strength it would have without exchange, and has the higher free energy. Of 2000
+random points, all whose order was not rounding had less than 0.1."""
+
 _PREFERENCE = 1e-13
 """Free energies closer than this, relative to 1 + |F|, are equal; the family first in `Family` is taken."""
 
@@ -37,7 +45,7 @@ class DressedMinimum(NamedTuple):
     single-particle fields relative to free response, > 0 in a stable state without single-particle order, 0 where there
     is such order. phi, filling: (N, sublattice, species). pair, antipair: <b_1 b_2>, <b_1† b_2>, (N, sublattice).
     energies: free energy of each family, inf where it was found not to be acceptable, (N, 4); stability against
-    single-particle order is asked of those only that would win.
+    single-particle order is asked of those only that would win. look: all of the functional at the state, see `survey`.
     """
 
     family: Array
@@ -52,6 +60,7 @@ class DressedMinimum(NamedTuple):
     antipair: Array
     filling: Array
     energies: Array
+    look: Look
 
 
 def minimise(
@@ -72,12 +81,16 @@ def minimise(
             continue
         part = _Points(evaluate.pick(sites, index), exchange[index], n_max, cold).solve(x[index])
         if out is None:
-            out = DressedMinimum(*(np.zeros((T.size, *v.shape[1:]), v.dtype) for v in part))
-        for whole, piece in zip(out, part, strict=True):
+            out = jax.tree.map(partial(_empty, T.size), part)
+        for whole, piece in zip(jax.tree.leaves(out), jax.tree.leaves(part), strict=True):
             whole[index] = piece
     if out is None:
         raise ValueError("no points")
     return out
+
+
+def _empty(size: int, like: np.ndarray) -> np.ndarray:
+    return np.zeros((size, *like.shape[1:]), like.dtype)
 
 
 def _product(p: Sites, n_max: int) -> np.ndarray:
@@ -111,14 +124,18 @@ class _Points:
         self.species = sites.z_t.shape[1]
         self.names = dressed.NAMES[self.species]
         self.slow_T = np.maximum(sites.T, _COLDEST * exchange)
+        self.ceiling = np.full(self.size, np.inf)
 
     def solve(self, x: np.ndarray) -> DressedMinimum:
         """Minimise every family and pick."""
         single, collapsed = self._single(x)
-        states = {Family.SINGLE: single, Family.NORMAL: self._without_singles(Family.NORMAL)}
-        if self.species == 2:
-            states[Family.PAIR] = self._without_singles(Family.PAIR)
-            states[Family.ANTIPAIR] = self._without_singles(Family.ANTIPAIR)
+        valid = single.ok & (single.dressing <= families.DRESSING_LIMIT) & (self.slow_T == self.sites.T)
+        self.ceiling = np.where(valid, single.free_energy, np.inf)
+        everywhere = np.ones(self.size, bool)
+        normal = self._without_singles(Family.NORMAL, everywhere)
+        states = {Family.SINGLE: single, Family.NORMAL: normal}
+        for family in (Family.PAIR, Family.ANTIPAIR) if self.species == 2 else ():
+            states[family] = self._without_singles(family, self._may_order(family, normal))
         return self._pick(states, collapsed, x)
 
     def _pick(self, states: dict[Family, _State], collapsed: np.ndarray, x: np.ndarray) -> DressedMinimum:
@@ -160,6 +177,7 @@ class _Points:
             0.5 * mean[..., 3] if two else zero,
             mean[..., -self.species :],
             energies,
+            look,
         )
 
     def _stable(self, energies: np.ndarray, fields: np.ndarray, collapsed: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -193,18 +211,44 @@ class _Points:
         scale = np.empty_like(J)
         scale[:] = 0.1 * np.maximum(self.sites.z_t.max(-1), 1e-12)[:, None, None]
         index = np.flatnonzero(np.abs(x).max((-1, -2)) > 0)
-        state, _, phi = self._descend(Family.SINGLE, names, index, J[index], scale[index], self.sites, self.cold)
-        ordered = np.abs(phi).max((-1, -2)) > families.SINGLE_FLOOR
+
+        def follow(index: np.ndarray, stages: tuple[float, ...]) -> tuple[_State, np.ndarray]:
+            state, _, phi = self._descend(
+                Family.SINGLE, names, index, J[index], scale[index], self.sites, self.cold, stages=stages
+            )
+            return state, np.abs(phi).max((-1, -2)) > families.SINGLE_FLOOR
+
+        state, ordered = follow(index, families.QUICK)
+        sure = state.ok & ordered & (state.dressing <= families.DRESSING_LARGE)
+        again, better = follow(index[~sure[index]], families.CAREFUL)
+        state = _State(*(_where(sure, old, new) for old, new in zip(state, again, strict=True)))
+        ordered = np.where(sure, ordered, better)
         return state._replace(ok=state.ok & ordered), state.ok & ~ordered
 
-    def _without_singles(self, family: Family) -> _State:
+    def _may_order(self, family: Family, normal: _State) -> np.ndarray:
+        """Where the normal state is not clearly stable against a uniform pair or anti-pair field, or is no good."""
+        out = (self.slow_T > 0) & (self.slow_T < _HOTTEST * self.n_max * self.exchange)
+        index = np.flatnonzero(out & normal.ok & (self.slow_T == self.sites.T))
+        if not index.size or self.sublattices == 2:
+            return out
+        names = families.variants(family, self.species, self.sublattices)[0]
+        field = _PROBE * np.maximum(self.exchange, self.slow_T)[index]
+        held = [self.names.index(name) for name in names]
+        x = np.ascontiguousarray(normal.fields[index][..., held])
+        x[..., 0] = field[:, None]
+        look = evaluate.look(
+            evaluate.pick(self.sites._replace(T=self.slow_T), index), x, np.ones(index.size),
+            f=bond.frame(self.n_max, self.species, families.KIND[family]), names=names, cold=False, parameters=False,
+        )  # fmt: skip
+        pulled_back = look.gradient[:, 0, 0] > _STABLE * field * look.response[:, 0, 0, 0]
+        out[index] = ~(pulled_back & (look.free_energy > normal.free_energy[index]))
+        return out
+
+    def _without_singles(self, family: Family, possible: np.ndarray) -> _State:
         """Normal, pair and anti-pair families, from one uniform start and, on two sublattices, staggered ones."""
         size = np.maximum(self.exchange, self.slow_T)
         sites = self.sites._replace(T=self.slow_T)
-        possible = self.slow_T > 0
-        if family is not Family.NORMAL:
-            possible &= self.slow_T < _HOTTEST * self.n_max * self.exchange
-        index = np.flatnonzero(possible)
+        index = np.flatnonzero(possible & (self.slow_T > 0))
         best = self._nothing()
         if family is Family.NORMAL:
             # Without hopping and temperature no field moves anything.
@@ -219,7 +263,7 @@ class _Points:
                 scale = np.broadcast_to(size[:, None, None], start.shape)
                 state, order, _ = self._descend(family, names, index, start[index], scale[index], sites, False)
                 if family is not Family.NORMAL:
-                    state = state._replace(ok=state.ok & (order > families.ORDER_FLOOR))
+                    state = state._replace(ok=state.ok & (order > families.PAIR_FLOOR))
                 state = self._at_own_temperature(family, state)
                 F = state.free_energy
                 lower = state.ok & np.isfinite(F) & (F + 1e-12 * (1.0 + np.abs(F)) < best.free_energy)
@@ -244,7 +288,7 @@ class _Points:
         F[index], dressing[index] = look.free_energy, families.dressing(look)
         if family is not Family.NORMAL:
             column = self.names.index(families.variants(family, self.species, self.sublattices)[0][0])
-            ok[index] &= np.abs(look.mean[..., column]).max(-1) > families.ORDER_FLOOR
+            ok[index] &= np.abs(look.mean[..., column]).max(-1) > families.PAIR_FLOOR
         return _State(state.fields, ok, F, dressing)
 
     def _descend(
@@ -256,14 +300,16 @@ class _Points:
         scale: np.ndarray,
         sites: Sites,
         cold: bool,
+        stages: tuple[float, ...] = (1.0,),
     ) -> tuple[_State, np.ndarray, np.ndarray]:
         """Run the jobs; returns the family at all points, the average that its first field couples to, and phi."""
         out = self._nothing()
         order, phi = np.zeros(self.size), np.zeros((self.size, self.sublattices, self.species))
         if index.size == 0:
             return out, order, phi
-        plan = Plan(families.KIND[family], names, families.STAGES.get(family, (1.0,)), self.n_max, self.species, cold)
-        found = families.descend(sites, index, start, scale, plan=plan)
+        extrapolate = stages == families.QUICK
+        plan = Plan(families.KIND[family], names, stages, self.n_max, self.species, cold, 0, extrapolate)
+        found = families.descend(sites, index, start, scale, plan=plan, ceiling=self.ceiling[index])
         # The functional is even in every order-making field; the sign is a choice of phase.
         for i, name in enumerate(names):
             column = found.x[..., i]

@@ -53,8 +53,9 @@ def mixtures():
 
 def test_nothing_is_nan_and_everything_is_accounted_for(mixtures):
     _, state, seen = mixtures
-    for name, value in (*state._asdict().items(), *seen._asdict().items()):
-        if name != "energies":  # inf there means: this family is not acceptable
+    everything = (*state._asdict().items(), *state.look._asdict().items(), *seen._asdict().items())
+    for name, value in everything:
+        if name not in ("energies", "look"):  # inf there means: this family is not acceptable
             assert np.isfinite(value).all(), name
     assert not (state.status & int(Status.NOT_FINITE)).any()
     large = state.dressing > DRESSING_LARGE
