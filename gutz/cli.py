@@ -181,6 +181,7 @@ def boundary(**options: Any) -> int:
 @_FILE
 @_SET
 @_AT
+@click.option("--sites", is_flag=True, help="Also solve the cloud site by site, to check local density.")
 @_out("Write numbers (netCDF) and figures (PNG and PDF) into this folder.")
 @_JSON
 @_QUIET

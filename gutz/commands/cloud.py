@@ -25,8 +25,9 @@ from gutz.status import SENTENCES, UNTRUSTED, Status, describe
 from gutz.trap import loading, profiles
 from gutz.trap.cloud import Cloud
 from gutz.trap.loading import Margin
+from gutz.trap.sites import check
 
-NETCDF, PROFILES = "clouds.nc", "profiles.nc"
+NETCDF, PROFILES, SITES = "clouds.nc", "profiles.nc", "sites.nc"
 _PHONONS = {True: "phonon entropy to one loop", False: "phonon entropy not included"}
 LEAST_SHARE = 5e-4
 """Phases with fewer of the atoms are not listed."""
@@ -36,6 +37,7 @@ def run(
     file: Path,
     overrides: Sequence[str],
     at: Sequence[str],
+    sites: bool,
     out: str | None,
     as_json: bool,
     quiet: bool,
@@ -46,6 +48,9 @@ def run(
     source, full = load(file, overrides, clouds=True)
     clouds.check(full)
     chosen = _fixed(full, values(at))
+    if sites and chosen.points > 1:
+        held = " ".join(f"--at {axis.name}={axis.values[0]:g}" for axis in chosen.axes if axis.values.size > 1)
+        raise InputError(f"--sites solves one cloud at a time; choose it, for example {held}")
     check_physics(chosen)
     folder = None if out is None else _folder(out, force)
     asked = list(clouds.points(chosen))
@@ -62,15 +67,23 @@ def run(
                 hint = margins[-1].critical_T / cloud.gas.scale
             if progress:
                 progress(len(solved), len(asked))
+    resolved = check(solved[0]) if sites else None
     table = clouds.table(chosen, asked, solved, margins)
     if as_json:
-        console.write_json(_record(table, asked, solved, margins))
+        console.write_json(
+            _record(table, asked, solved, margins) | ({} if resolved is None else {"sites": resolved.attrs})
+        )
     elif len(solved) == 1:
         _print_one(chosen, asked[0], solved[0], margins[0])
     else:
         _print_many(chosen, table, phase)
+    for words in () if resolved is None or as_json else resolved.attrs["words"]:
+        console.say(f"site by site: {words}")
     _notes(solved, quiet)
     if folder is not None:
+        if resolved is not None:
+            export.write_netcdf(resolved, paths.inside(folder, SITES))
+            console.note(f"written: {folder / SITES}", quiet or as_json)
         for path in _write(folder, chosen, table, asked, solved):
             console.note(f"written: {path}", quiet or as_json)
     return 1 if loading.worst(solved) & UNTRUSTED else 0
