@@ -39,6 +39,9 @@ CUTOFF_LADDER = {1: (4, 6, 9, 14, 20, 30, 40), 2: (3, 4, 5, 6, 8, 10, 12)}
 TOLERANCES = {"residual": descent.TOLERANCE, "target": targets.TARGET_TOLERANCE, "cutoff_weight": CUTOFF_WEIGHT}
 """What a converged point fulfils, for the record of a run."""
 
+_NO_ENTROPY = 1e-9
+"""Entropies below minus this are remarked on; rounding makes smaller ones."""
+
 _CHORD_STEPS = 2
 
 
@@ -131,6 +134,9 @@ class _Collector:
         if mixture.species == 2:
             demixing = (mixture.U12 > np.sqrt(mixture.U[:, 0] * mixture.U[:, 1])) & (mixture.n_max != 1)
             out["status"] = out["status"] | np.where(demixing, int(Status.DEMIXING), 0).astype(np.int32)
+        with np.errstate(invalid="ignore"):
+            negative = out["entropy"] < -_NO_ENTROPY
+        out["status"] = out["status"] | np.where(negative, int(Status.NEGATIVE_ENTROPY), 0).astype(np.int32)
         out["status"] = np.where(gone, int(Status.COLLAPSE), out["status"]).astype(np.int32)
         # Where a superlattice makes the sublattices differ, their densities differ without any order.
         seen = out if mixture.sublattices == 1 else out | {"staggering": np.zeros_like(out["staggering"])}

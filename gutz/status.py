@@ -26,6 +26,7 @@ class Status(IntFlag):
     FALLBACK = 512
     DRESSING_LARGE = 1024
     FILLING_UNREACHABLE = 2048
+    NEGATIVE_ENTROPY = 4096
 
 
 SENTENCES: dict[Status, str] = {
@@ -36,7 +37,7 @@ SENTENCES: dict[Status, str] = {
     "may not be the true one",
     Status.FILLING_GAP: "no uniform state has the filling (or entropy) asked for: it lies inside a jump "
     "between two phases; a state at the jump is shown",
-    Status.PLATEAU: "the filling does not depend on mu here; mu is the middle of the plateau",
+    Status.PLATEAU: "the filling does not change along some direction of mu (a plateau); mu is its middle",
     Status.DEGENERATE: "the ground state of a site is degenerate at T = 0; responses to small changes are not "
     "defined, use a small T > 0",
     Status.ENTROPY_UNREACHABLE: "no temperature gives the entropy asked for; the nearest state is shown",
@@ -44,6 +45,7 @@ SENTENCES: dict[Status, str] = {
     Status.FALLBACK: "the second-order (dressed) result does not exist here; the product result is shown",
     Status.DRESSING_LARGE: "the second-order term is not small against the first-order one; treat as qualitative",
     Status.FILLING_UNREACHABLE: "no chemical potential within the cutoff gives the filling asked for",
+    Status.NEGATIVE_ENTROPY: "the truncated (dressed) expansion gives a slightly negative entropy; read it as zero",
 }
 
 UNTRUSTED = (
