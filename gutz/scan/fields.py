@@ -203,6 +203,16 @@ def length(value: Any) -> float:
         raise ValueError(f"must be a number and one of the units {', '.join(KINDS['length'].units)}") from None
 
 
+def quantity(value: Any, kind: str, example: str) -> float:
+    """Convert a quantity given as text with a unit, into SI."""
+    if not isinstance(value, str):
+        raise ValueError(f'needs a unit, for example "{example}"')
+    try:
+        return parse_quantity(value, kind, "")
+    except InputError:
+        raise ValueError(f"must be a number and one of the units {', '.join(KINDS[kind].units)}") from None
+
+
 def text(value: Any) -> str:
     """Convert a short one-line text meant for people."""
     if not isinstance(value, str) or len(value) > MAX_TEXT or not value.isprintable():

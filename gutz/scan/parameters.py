@@ -36,7 +36,27 @@ PARAMETERS: dict[str, Parameter] = {
     "trap.frequency": Parameter("Trap frequency", "frequency", ("species", "direction"), 0.0),
     "trap.curvature": Parameter("Trap curvature", "number", ("species", "direction"), 0.0),
     "trap.T_over_Tc": Parameter("Initial T over T_c", "number", (), 0.0),
+    "imaging.tof": Parameter("Time of flight", "time", (), 0.0),
+    "imaging.efficiency": Parameter("Detection efficiency", "number", (), 0.0),
+    "imaging.resolution": Parameter("Resolution (rms)", "length", (), 0.0),
+    "imaging.pixel": Parameter("Pixel", "length", (), 0.0),
+    "imaging.picture": Parameter("Side of the picture", "length", (), 0.0),
+    "imaging.photons": Parameter("Photons per pixel", "number", (), 0.0),
+    "imaging.fluctuation": Parameter("Fluctuation of the atom number", "number", (), 0.0),
+    "imaging.jitter": Parameter("Shaking of the picture (rms)", "length", (), 0.0),
+    "imaging.technical": Parameter("Technical factor", "number", (), 1.0),
+    "imaging.shots": Parameter("Shots", "number", (), 1.0),
+    "imaging.significance": Parameter("Significance", "number", (), 0.0),
 }
+
+IMAGING = {path: parameter for path, parameter in PARAMETERS.items() if path.startswith("imaging.")}
+"""Parameters of the picture: they change no state, only what is seen of it."""
+
+ABOVE_LOWEST = (
+    "mixture.filling", "lattice.depth", "trap.N", "trap.frequency", "trap.curvature", "imaging.tof",
+    "imaging.efficiency", "imaging.pixel", "imaging.picture", "imaging.photons", "imaging.significance",
+)  # fmt: skip
+"""Parameters that must exceed their lowest value."""
 
 LENGTH_UNITS = tuple(KINDS["length"].units)
 
@@ -84,6 +104,10 @@ def target(path: str) -> Target:
 
 def units_of(parameter: Parameter, in_lattice: bool) -> tuple[str, ...]:
     """Units an axis over this parameter may be given in; the first is the one meant where none is given."""
+    if parameter.kind == "time":
+        return ("ms", *(unit for unit in KINDS["time"].units if unit != "ms"))
+    if parameter.kind == "length" and parameter in IMAGING.values():
+        return ("um", *(unit for unit in LENGTH_UNITS if unit != "um"))
     if parameter.kind == "length":
         return ("a0", *(unit for unit in LENGTH_UNITS if unit != "a0"))
     if parameter.kind == "frequency":

@@ -1,4 +1,4 @@
-"""What a scan file says, checked: sections [mixture] [lattice] [trap] [ansatz] [axes] [output].
+"""What a scan file says, checked: sections [mixture] [lattice] [trap] [imaging] [ansatz] [axes] [output].
 
 In:  a `Document` (text of a TOML file, overrides).
 Out: a frozen `Spec`, or one `InputError` that lists every mistake, one sentence each, with its line.
@@ -16,9 +16,10 @@ from pydantic import BaseModel, ConfigDict, PlainValidator, ValidationError
 
 from gutz.errors import InputError
 from gutz.phases import WORDS, Phase
-from gutz.scan import fields, parameters
+from gutz.scan import fields, imaging, parameters
 from gutz.scan.document import Document
 from gutz.scan.fields import Beam, Energy, Per
+from gutz.scan.imaging import ImagingSection
 from gutz.variables import ABSENT, VARIABLES
 
 ANSAETZE = tuple(ABSENT)
@@ -153,6 +154,7 @@ class Spec(_Section):
     mixture: MixtureSection = MixtureSection()
     lattice: LatticeSection | None = None
     trap: TrapSection | None = None
+    imaging: ImagingSection | None = None
     ansatz: AnsatzSection = AnsatzSection()
     axes: dict[str, AxisSection] = {}
     output: OutputSection = OutputSection()
@@ -192,6 +194,7 @@ _SECTIONS: dict[str, type[BaseModel]] = {
     "mixture": MixtureSection,
     "lattice": LatticeSection,
     "trap": TrapSection,
+    "imaging": ImagingSection,
     "ansatz": AnsatzSection,
     "axes": AxisSection,
     "output": OutputSection,
@@ -304,6 +307,7 @@ def _of_presence(data: dict[str, Any]) -> Iterator[Mistake]:
         yield from _of_trap_presence(data, touched)
     elif not touched("mixture.mu") and not touched("mixture.filling"):
         yield Mistake("mixture", "neither mu nor filling is given; give exactly one")
+    yield from (Mistake(*found) for found in imaging.of_presence(data, given))
     if lattice is None:
         for name in ("t", "U"):
             if not given(f"mixture.{name}") and not all(f"mixture.{name}.{i}" in swept for i in (1, 2)):
@@ -376,6 +380,7 @@ def _of_combination(spec: Spec) -> Iterator[Mistake]:
         yield Mistake("axes", f"together give {spec.points:,} points; at most {MAX_POINTS:,} are allowed")
     yield from _of_lengths(spec)
     yield from _of_trap(spec)
+    yield from (Mistake(*found) for found in imaging.of_combination(spec))
     yield from _of_units(spec)
 
 
@@ -385,10 +390,9 @@ def _of_axis(spec: Spec, name: str, axis: AxisSection, found: parameters.Target)
         yield Mistake(key, "the name of an axis must be a word of letters, digits and underscores, at most 40")
     elif name in _RESERVED and not (name in GIVEN_BY_AXIS and found.path == f"mixture.{name}" and found.whole):
         yield Mistake(key, f'"{name}" is the name of an output; call the axis something else')
-    if found.path.startswith("trap.") and spec.trap is None:
-        yield Mistake(f"{key}.parameter", f"{axis.parameter} needs a [trap] section")
-    if found.path.startswith("lattice.") and spec.lattice is None:
-        yield Mistake(f"{key}.parameter", f"{axis.parameter} needs a [lattice] section")
+    section = found.path.split(".")[0]
+    if section != "mixture" and getattr(spec, section) is None:
+        yield Mistake(f"{key}.parameter", f"{axis.parameter} needs a [{section}] section")
     if spec.lattice is not None and found.path in ("mixture.t", "mixture.U", "mixture.U12"):
         yield Mistake(
             f"{key}.parameter",
@@ -414,7 +418,7 @@ def _of_axis(spec: Spec, name: str, axis: AxisSection, found: parameters.Target)
     if axis.spacing == "log" and low <= 0:
         yield Mistake(f"{key}.start", f"{low:g} is not allowed; it must be greater than 0 for log spacing")
     elif found.parameter.lowest is not None:
-        strict = found.path in ("mixture.filling", "lattice.depth", "trap.N", "trap.frequency", "trap.curvature")
+        strict = found.path in parameters.ABOVE_LOWEST
         if low < found.parameter.lowest or (strict and low == 0):
             rule = "greater than 0" if strict else f"at least {found.parameter.lowest:g}"
             yield Mistake(key, f"starts or ends at {low:g}; {axis.parameter} must be {rule}")
