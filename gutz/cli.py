@@ -126,12 +126,30 @@ def solve(**options: Any) -> int:
 @_out("Folder for the results [default: the file's name].")
 @click.option("--resume", is_flag=True, help="Continue a run that was stopped.")
 @click.option("--netcdf", is_flag=True, help="Also write one netCDF file, data.nc.")
+@click.option("--estimate", is_flag=True, help="Print points, chunks, time and size, and stop there.")
+@click.option(
+    "--workers",
+    type=click.IntRange(0, 1024),
+    metavar="N",
+    help="Processes that compute; 0: this one [default: one per core where it pays].",
+)
+@click.option(
+    "--chunk-limit",
+    type=click.FloatRange(min=1.0),
+    metavar="SECONDS",
+    help="Give up a chunk after this long [default: an hour, and 20 times what is expected].",
+)
 @_JSON
 @_QUIET
 @_FORCE
 @_DEBUG
 def scan(**options: Any) -> int:
     """A whole scan."""
+    if options.pop("estimate"):
+        from gutz.commands import check as judge
+
+        names = ("file", "overrides", "as_json", "quiet", "debug")
+        return judge.run(**{name: options[name] for name in names})
     _load_numerics(quiet=options["quiet"])
     from gutz.commands import scan as command
 

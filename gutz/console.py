@@ -16,7 +16,7 @@ import click
 import numpy as np
 from rich import box
 from rich.console import Console
-from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
+from rich.progress import BarColumn, Progress, TextColumn
 from rich.table import Table
 
 LINE_EVERY = 30.0
@@ -77,24 +77,54 @@ def duration(seconds: float) -> str:
 
 
 @contextmanager
-def progress(words: str, quiet: bool) -> Iterator[Any]:
-    """Yield a function (done, total) that shows how far the work is."""
+def progress(words: str, quiet: bool, points: int = 0) -> Iterator[Any]:
+    """Yield a function (done, total) that shows how far the work is, how fast it goes and how long it will take.
+
+    points: of the whole work, where the rate is to be told in points.
+    """
     if quiet:
         yield None
-    elif sys.stderr.isatty():
+        return
+    pace = _Pace(points)
+    if sys.stderr.isatty():
         columns = (TextColumn("{task.description}"), BarColumn(), TextColumn("{task.completed}/{task.total}"))
-        with Progress(*columns, TimeRemainingColumn(), console=Console(stderr=True), transient=True) as bar:
-            task = bar.add_task(words, total=None)
-            yield lambda done, total: bar.update(task, completed=done, total=total)
+        with Progress(*columns, TextColumn("{task.fields[pace]}"), console=Console(stderr=True), transient=True) as bar:
+            task = bar.add_task(words, total=None, pace="")
+            yield lambda done, total: bar.update(task, completed=done, total=total, pace=pace.words(done, total))
     else:
         last = [time.monotonic()]
 
         def line(done: int, total: int) -> None:
+            found = pace.words(done, total)
             if time.monotonic() - last[0] >= LINE_EVERY:
                 last[0] = time.monotonic()
-                click.echo(f"{words}: {done} of {total} chunks done", err=True)
+                click.echo(", ".join(filter(None, (f"{words}: {done} of {total} chunks done", found))), err=True)
 
         yield line
+
+
+class _Pace:
+    """Rate and time left, from the first report on: what came before is loading and compiling."""
+
+    def __init__(self, points: int) -> None:
+        self._points = points
+        self._first: tuple[int, float] | None = None
+
+    def words(self, done: int, total: int) -> str:
+        """Say both, or "" while there is nothing to judge by."""
+        now = time.monotonic()
+        if self._first is None or done <= self._first[0]:
+            self._first = self._first or (done, now)
+            return ""
+        per_second = (done - self._first[0]) / max(now - self._first[1], 1e-9)
+        left = duration((total - done) / per_second)
+        if not self._points:
+            return f"{left} left"
+        return f"{_rate(per_second * self._points / total)} points per s, {left} left"
+
+
+def _rate(value: float) -> str:
+    return f"{value:,.0f}" if value >= 10 else f"{value:.2g}"
 
 
 def _unmarked(words: str) -> str:

@@ -24,6 +24,8 @@ def run(
     out: str | None,
     resume: bool,
     netcdf: bool,
+    workers: int | None,
+    chunk_limit: float | None,
     as_json: bool,
     quiet: bool,
     force: bool,
@@ -31,10 +33,11 @@ def run(
 ) -> int:
     """Run the scan; the exit code says whether every point can be trusted, or what stopped it."""
     start = time.monotonic()
-    with console.progress(file.stem, quiet) as progress:
+    points = runner.load(file, overrides)[1].points
+    with console.progress(file.stem, quiet, points) as progress:
         outcome = runner.run(
             file, out, overrides=overrides, resume=resume, force=force, progress=progress,
-            notice=lambda words: console.note(words, quiet),
+            notice=lambda words: console.note(words, quiet), workers=workers, limit=chunk_limit,
         )  # fmt: skip
     files = [store.NAME]
     if not outcome.stopped:
@@ -66,6 +69,12 @@ def _draw(folder: Path) -> list[str]:
     return made
 
 
+def _crew(outcome: Outcome) -> str:
+    """Who computed and how much memory that took."""
+    words = f" by {outcome.workers} processes" if outcome.workers else ""
+    return words + (f", {console.size(outcome.peak_bytes)} of memory at most" if outcome.peak_bytes else "")
+
+
 def _record(outcome: Outcome, files: Sequence[str]) -> dict[str, Any]:
     return {
         "folder": str(outcome.folder),
@@ -75,6 +84,9 @@ def _record(outcome: Outcome, files: Sequence[str]) -> dict[str, Any]:
         "computed": outcome.computed,
         "untrusted": outcome.untrusted,
         "stopped": bool(outcome.stopped),
+        "failed": [{"chunk": list(index), "reason": reason} for index, reason in outcome.failed],
+        "workers": outcome.workers,
+        "peak_bytes": outcome.peak_bytes,
         "remarks": {str(bit.name).lower(): count for bit, count in outcome.remarks.items()},
     }
 
@@ -83,8 +95,10 @@ def _print(outcome: Outcome, files: Sequence[str], seconds: float) -> None:
     """Say how it went and where everything is."""
     console.say(
         f"{outcome.points:,} points, {outcome.computed} of {outcome.chunks} chunks computed "
-        f"in {console.duration(seconds)}"
+        f"in {console.duration(seconds)}{_crew(outcome)}"
     )
+    for index, reason in outcome.failed:
+        console.say(f"  chunk {'/'.join(map(str, index))} {reason}; its points are not computed: try --resume")
     for bit, count in outcome.remarks.items():
         console.say(f"  {count:,} points: {SENTENCES[bit]}")
     if outcome.stopped:

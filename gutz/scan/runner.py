@@ -3,63 +3,33 @@
 In:  a scan file (or its text, checked), an output folder.
 Out: `Outcome`, and the run on disk (`gutz.scan.store`).
 
-One process computes here; anything with `submit` can take its place (`executor`), since a chunk is computed
-by `compute_chunk(plan, index)`, a plain function of plain data. Only this process writes.
+A chunk is computed by `compute_chunk(plan, index)`, a plain function of plain data: in this process, in worker
+processes or on a cluster (`gutz.scan.crew`). Only this process writes.
 """
 
-import errno
-import shutil
-import signal
-import threading
 from collections.abc import Callable, Iterator, Sequence
-from concurrent.futures import FIRST_COMPLETED, Future, wait
 from contextlib import contextmanager
 from dataclasses import dataclass
+from functools import partial
 from pathlib import Path
-from types import FrameType
-from typing import Any, Protocol
+from typing import Any
 
 import numpy as np
 import zarr
-from filelock import FileLock, Timeout
 
-from gutz.errors import InputError, OutputError, ResourceError
-from gutz.scan import document, paths, schema, spec, store
+from gutz.errors import GutzError, InputError
+from gutz.scan import document, estimate, guard, paths, schema, spec, store
 from gutz.scan.chunk import compute_chunk
+from gutz.scan.crew import Crew, Executor, Failed, Here, Others, results
+from gutz.scan.document import Document
+from gutz.scan.guard import Notice
 from gutz.scan.plan import Plan, check_physics, plan
+from gutz.scan.workers import Workers, peak_bytes
 from gutz.solver import TOLERANCES
 from gutz.status import UNTRUSTED, Status
 
-LOCK = ".lock"
-DISK_MARGIN = 50_000_000
-"""Bytes left free beside a run, for figures and the system."""
-
 Progress = Callable[[int, int], None]
 """Called with the chunks done and the chunks there are."""
-
-Notice = Callable[[str], None]
-"""Called with a sentence for the person who waits."""
-
-
-class Executor(Protocol):
-    """Anything that can be handed work; `concurrent.futures` pools and their like."""
-
-    def submit(self, function: Callable[..., Any], /, *args: Any) -> Future[Any]:
-        """Start the call and return its future."""
-        ...
-
-
-class Here:
-    """The executor that uses no other process: the call is made at once, in place."""
-
-    def submit(self, function: Callable[..., Any], /, *args: Any) -> Future[Any]:
-        """Make the call and return its finished future."""
-        future: Future[Any] = Future()
-        try:
-            future.set_result(function(*args))
-        except Exception as error:
-            future.set_exception(error)
-        return future
 
 
 @dataclass(frozen=True)
@@ -67,8 +37,9 @@ class Outcome:
     """How a run went.
 
     folder: where it is. points: of the grid; computed: chunks computed this time, of `chunks`. remarks:
-    points per status bit. untrusted: points whose numbers must not be used. stopped: the signal that ended
-    it, 0 if none.
+    points per status bit. untrusted: points whose numbers must not be used. failed: chunks given up, and why; their
+    points stay "not computed". stopped: the signal that ended it, 0 if none. workers: processes that computed, 0 for
+    this one. peak_bytes: most memory held, workers of this machine included, 0 where the system does not tell.
     """
 
     folder: Path
@@ -77,12 +48,15 @@ class Outcome:
     computed: int
     remarks: dict[Status, int]
     untrusted: int
+    failed: tuple[tuple[tuple[int, ...], str], ...]
     stopped: int
+    workers: int
+    peak_bytes: int
 
     @property
     def exit_code(self) -> int:
-        """What the command line returns: 0, 1 with untrusted points, 128 + signal when stopped."""
-        return 128 + self.stopped if self.stopped else 1 if self.untrusted else 0
+        """What the command line returns: 0, 1 with untrusted points or failed chunks, 128 + signal when stopped."""
+        return 128 + self.stopped if self.stopped else 1 if self.untrusted or self.failed else 0
 
 
 def run(
@@ -96,16 +70,48 @@ def run(
     notice: Notice | None = None,
     executor: Executor | None = None,
     in_flight: int = 1,
+    workers: int | None = 0,
+    limit: float | None = None,
 ) -> Outcome:
     """Compute every point of a scan file and save it.
 
     out: output folder, default the file's name without ".toml", in the current folder. overrides: texts such
     as "mixture.T=0.1". resume: continue a stopped run. force: replace an existing one. progress: called after
-    every chunk. notice: called with what to tell a person meanwhile. in_flight: chunks handed to the executor at once.
+    every chunk. notice: called with what to tell a person meanwhile. workers: processes to compute in; 0 for none but
+    this one, None for one per core where that pays (a script that asks for them needs the usual
+    `if __name__ == "__main__":`). executor, in_flight: somebody else's executor in their place, and chunks handed to
+    it at once. limit: seconds a chunk may take in worker processes.
     Raises InputError (mistakes in the file), OutputError (output exists or is in use), DataError (existing run
-    damaged), ResourceError (disk). At Ctrl-C or SIGTERM the chunk at work is finished and saved, and then
-    `stopped` is set.
+    damaged), ResourceError (disk, or processes that keep dying). At Ctrl-C or SIGTERM what is at work is finished and
+    saved, and then `stopped` is set.
     """
+    source, full = load(path, overrides)
+    folder = paths.output_folder(str(out) if out is not None else Path(path).stem)
+    paths.make_folder(folder)
+    with guard.locked(folder):
+        if force and not resume:
+            store.remove(folder)
+        guard.check_disk(folder, schema.bytes_per_point(full) * full.points)
+        target = _opened(folder, full, source, resume)
+        todo = [index for index in full.indices() if not target.done(index)]
+        with guard.stoppable(notice) as stop, crew_of(full, len(todo), executor, in_flight, workers) as crew:
+            return _work(folder, full, target, todo, progress, stop, crew, limit or estimate.time_limit(full))
+
+
+def _opened(folder: Path, full: Plan, source: Document, resume: bool) -> store.Store:
+    """The run to continue, or a new one."""
+    try:
+        if resume and store.exists(folder):
+            return store.Store.reopen(folder, full)
+        return store.Store.create(folder, full, source, TOLERANCES)
+    except GutzError:
+        raise
+    except OSError as error:
+        raise guard.refusal(error) from None
+
+
+def load(path: str | Path, overrides: Sequence[str]) -> tuple[Document, Plan]:
+    """Read and check a file that is to be scanned. Raises InputError."""
     source = document.read(Path(path), overrides)
     full = plan(spec.check(source))
     if full.spec.trap is not None:
@@ -113,47 +119,56 @@ def run(
     if not full.axes:
         raise InputError(f"{source.name}: has no [axes.NAME] section; a scan needs one to five")
     check_physics(full)
-    folder = paths.output_folder(str(out) if out is not None else Path(path).stem)
-    paths.make_folder(folder)
-    with _locked(folder):
-        if force and not resume:
-            store.remove(folder)
-        _check_disk(folder, full)
-        if resume and store.exists(folder):
-            target = store.Store.reopen(folder, full)
-        else:
-            target = store.Store.create(folder, full, source, TOLERANCES)
-        return _work(folder, full, target, progress, notice, executor or Here(), in_flight)
+    return source, full
+
+
+@contextmanager
+def crew_of(full: Plan, pieces: int, executor: Executor | None, in_flight: int, workers: int | None) -> Iterator[Crew]:
+    """Who computes: a given executor, this process, or worker processes, which end with the context."""
+    if executor is not None:
+        yield Others(executor, in_flight)
+        return
+    count = min(pieces, estimate.automatic_workers(full) if workers is None else workers)
+    if count == 0:
+        yield Here()
+        return
+    with Workers(count) as crew:
+        yield crew
+
+
+def memory_of(crew: Crew) -> tuple[int, int]:
+    """Worker processes of this machine, and the most memory held by them and this process, bytes."""
+    if isinstance(crew, Workers):
+        return crew.in_flight, peak_bytes() + crew.peak_bytes()
+    return 0, peak_bytes()
 
 
 def _work(
     folder: Path,
     full: Plan,
     target: store.Store,
+    todo: Sequence[tuple[int, ...]],
     progress: Progress | None,
-    notice: Notice | None,
-    executor: Executor,
-    in_flight: int,
+    stop: list[int],
+    crew: Crew,
+    limit: float,
 ) -> Outcome:
-    """Compute what is not done yet, in order, and write it as it comes."""
-    todo = [index for index in full.indices() if not target.done(index)]
+    """Compute what is not done yet, and write it as it comes."""
     total = int(np.prod(full.chunks))
     finished = total - len(todo)
-    queue, pending = iter(todo), dict[Future[Any], tuple[int, ...]]()
-    with _stoppable(notice) as stop:
-        while True:
-            while not stop and len(pending) < in_flight and (index := next(queue, None)) is not None:
-                pending[executor.submit(compute_chunk, full, index)] = index
-            if not pending:
-                break
-            for future in wait(pending, return_when=FIRST_COMPLETED).done:
-                _write(target, pending.pop(future), future.result())
-                finished += 1
-                if progress:
-                    progress(finished, total)
+    failed: list[tuple[tuple[int, ...], str]] = []
+    for index, values in results(crew, partial(compute_chunk, full), todo, stopped=lambda: bool(stop), limit=limit):
+        if isinstance(values, Failed):
+            failed.append((index, values.reason))
+            continue
+        _write(target, index, values)
+        finished += 1
+        if progress:
+            progress(finished, total)
     if finished == total:
         target.finish()
     remarks, untrusted = _count(target)
+    workers, memory = memory_of(crew)
     return Outcome(
         folder=folder,
         points=full.points,
@@ -161,7 +176,10 @@ def _work(
         computed=finished - (total - len(todo)),
         remarks=remarks,
         untrusted=untrusted,
-        stopped=stop[0] if stop and finished < total else 0,
+        failed=tuple(sorted(failed)),
+        stopped=stop[0] if stop and finished + len(failed) < total else 0,
+        workers=workers,
+        peak_bytes=memory,
     )
 
 
@@ -169,11 +187,7 @@ def _write(target: store.Store, index: tuple[int, ...], values: dict[str, Any]) 
     try:
         target.write(index, values)
     except OSError as error:
-        if error.errno in (errno.ENOSPC, errno.EDQUOT, errno.EFBIG):
-            raise ResourceError(
-                "the disk is full; what is done is kept: make room and continue with --resume"
-            ) from None
-        raise OutputError(f"the run cannot be written ({(error.strerror or 'disk error').lower()})") from None
+        raise guard.refusal(error) from None
 
 
 def _count(target: store.Store) -> tuple[dict[Status, int], int]:
@@ -189,54 +203,3 @@ def _count(target: store.Store) -> tuple[dict[Status, int], int]:
         for bit in counts:
             counts[bit] += int(np.count_nonzero(part & int(bit)))
     return {bit: count for bit, count in counts.items() if count}, untrusted
-
-
-@contextmanager
-def _locked(folder: Path) -> Iterator[None]:
-    """Hold the folder for this run alone; the system frees the lock even if the process is killed."""
-    path = paths.inside(folder, LOCK)
-    lock = FileLock(path, timeout=0)
-    try:
-        lock.acquire()
-    except Timeout:
-        raise OutputError(f"{folder.name} is in use by another run; wait for it or choose another --out") from None
-    except OSError as error:
-        raise OutputError(f"{folder.name} cannot be locked ({(error.strerror or 'disk error').lower()})") from None
-    try:
-        yield
-    finally:
-        path.unlink(missing_ok=True)
-        lock.release()
-
-
-@contextmanager
-def _stoppable(notice: Notice | None) -> Iterator[list[int]]:
-    """A list that receives the signal at the first Ctrl-C or SIGTERM; a second one interrupts at once."""
-    received: list[int] = []
-    if threading.current_thread() is not threading.main_thread():
-        yield received
-        return
-
-    def note(number: int, frame: FrameType | None) -> None:
-        if received:
-            raise KeyboardInterrupt
-        received.append(number)
-        if notice:
-            notice("stopping as soon as the chunk at work is saved; once more stops at once")
-
-    before = {number: signal.signal(number, note) for number in (signal.SIGINT, signal.SIGTERM)}
-    try:
-        yield received
-    finally:
-        for number, handler in before.items():
-            signal.signal(number, handler)
-
-
-def _check_disk(folder: Path, full: Plan) -> None:
-    needed = schema.bytes_per_point(full) * full.points
-    free = shutil.disk_usage(folder).free
-    if needed + DISK_MARGIN > free:
-        raise ResourceError(
-            f"the run needs up to {needed / 1e6:,.0f} MB of disk and {free / 1e6:,.0f} MB are free; "
-            "make room, use fewer points, or choose another --out"
-        )

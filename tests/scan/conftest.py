@@ -66,6 +66,13 @@ def quick(monkeypatch):
 
 
 @pytest.fixture
+def quick_workers(quick, monkeypatch):
+    """The same, in worker processes too."""
+    monkeypatch.setattr(quick, "compute_chunk", standin.compute_chunk)
+    return quick
+
+
+@pytest.fixture
 def mixture_file(tmp_path):
     path = tmp_path / "mixture.toml"
     path.write_text(MIXTURE)
@@ -86,7 +93,9 @@ def nothing_left_behind(tmp_path):
 
     handlers = [signal.getsignal(number) for number in (signal.SIGINT, signal.SIGTERM)]
     yield
-    strays = [path for path in Path(tmp_path).rglob("*") if path.name.endswith(".partial") or path.name == ".lock"]
+    strays = [
+        path for path in Path(tmp_path).rglob("*") if path.name.endswith(".partial") or path.name.startswith(".lock")
+    ]
     assert not strays
     assert not multiprocessing.active_children()
     assert [signal.getsignal(number) for number in (signal.SIGINT, signal.SIGTERM)] == handlers

@@ -5,6 +5,7 @@ It says nothing about physics; tests of physics use the real solver.
 """
 
 import os
+import signal
 import time
 from types import SimpleNamespace
 
@@ -14,6 +15,18 @@ from gutz.limits import collapses
 from gutz.phases import Phase
 from gutz.status import Status
 from gutz.variables import VARIABLES
+
+
+def compute_chunk(full, index):
+    """In a worker process: a chunk with this solver; the environment says which chunk misbehaves, and how."""
+    from gutz.scan import chunk
+
+    if os.environ.get("STANDIN_CRASH") == str(index):
+        os.kill(os.getpid(), signal.SIGKILL)
+    if os.environ.get("STANDIN_HANG") == str(index):
+        time.sleep(1000)
+    chunk.solve = solve
+    return chunk.compute_chunk(full, index)
 
 
 def solve(mixture, ansatz="product"):

@@ -9,7 +9,7 @@ from filelock import FileLock
 from test_store import same_bytes
 
 from gutz.errors import InputError, OutputError, ResourceError
-from gutz.scan import chunk, open_run
+from gutz.scan import chunk, guard, open_run
 from gutz.status import UNTRUSTED, Status
 
 
@@ -107,7 +107,7 @@ def test_strays_of_a_killed_run_are_removed(quick, mixture_file, tmp_path):
 
 
 def test_a_run_without_room_is_refused_before_it_starts(quick, mixture_file, tmp_path, monkeypatch):
-    monkeypatch.setattr(quick.shutil, "disk_usage", lambda path: type("Usage", (), {"free": 1000})())
+    monkeypatch.setattr(guard.shutil, "disk_usage", lambda path: type("Usage", (), {"free": 1000})())
     with pytest.raises(ResourceError, match="needs up to .* MB of disk"):
         quick.run(mixture_file, tmp_path / "out")
 

@@ -52,7 +52,7 @@ MESSAGES = [
     (MIXTURE, ["mixture.species=1"], "= mixture.U12 (near line 4): must be left out, because there is one species"),
     (MIXTURE, ["ansatz.kind=produkt"], 'ansatz.kind: "produkt" is not allowed; it must be "product" or "dressed"'),
     (MIXTURE, ['output.figures=["fase"]'], 'output.figures: holds "fase", which is not known; did you mean "phase"?'),
-    (MIXTURE, ["tarp.N=20"], "= tarp: unknown section; did you mean \"trap\"?"),
+    (MIXTURE, ["tarp.N=20"], '= tarp: unknown section; did you mean "trap"?'),
     (MIXTURE, ["axis.mu=3"], '= axis: unknown section; did you mean "axes"?'),
     (MIXTURE, ["mixture.depth=3"], "mixture.depth: unknown key; it belongs in [lattice]"),
     (
