@@ -23,10 +23,10 @@ FAINT = 1e-3
 class Feature(NamedTuple):
     """One feature of C_ab, or of n(k).
 
-    species: (a, b), counted from 1. where: "k' = k", "k' = -k", "k' = 0", "k' = k + (π, ..)" or "k = 0". height: mean over
-    k of C_ab on the feature above its surroundings; normalised: the same over n_a n_b. width: full width at half maximum
-    along x, in 1/lattice constant. weight: height summed over the momenta of the feature. meaning: a sentence. order:
-    this feature proves order by itself.
+    species: (a, b), counted from 1. where: "k' = k", "k' = -k", "k' = 0", "k' = k + (π, ..)" or "k = 0". height: mean
+    over k of C_ab on the feature above its surroundings; normalised: the same over n_a n_b. width: full width at half
+    maximum along x, in 1/lattice constant. weight: height summed over the momenta of the feature. meaning: a sentence.
+    order: this feature proves order by itself.
     """
 
     name: str
@@ -43,7 +43,8 @@ class Feature(NamedTuple):
 class Order(NamedTuple):
     """What the solution says.
 
-    condensate: |φ_a|², (a,). staggering: sublattice density difference, (a,). pair, antipair: local <b_1 b_2>, <b_1† b_2>. decays: by channel (see `gutz.noise.shapes`).
+    condensate: |φ_a|², (a,). staggering: sublattice density difference, (a,). pair, antipair: local <b_1 b_2>,
+    <b_1† b_2>. decays: by channel (see `gutz.noise.shapes`).
     """
 
     condensate: Floats

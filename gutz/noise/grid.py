@@ -76,7 +76,7 @@ class Grid(NamedTuple):
 
 def check_grid(shape: Sequence[int] | int, dim: int) -> Grid:
     """Read a size: one number for all directions, or one each. Raises InputError or ResourceError."""
-    given = (shape,) * dim if isinstance(shape, int | np.integer) else tuple(shape)
+    given = tuple(shape) if isinstance(shape, Sequence) else (shape,) * dim
     if len(given) != dim:
         raise InputError(f"size has {len(given)} entries; it needs {dim}, one for each direction of the lattice")
     for length in given:
