@@ -3,6 +3,7 @@
 The references are our own exact diagonalisation (`gutz.exact.ed`, itself tested against published energies). The
 error is the Frobenius norm of the difference over that of the exact map, shot noise included. docs/noise.md quotes
 this table.
+"""
 
 import numpy as np
 import pytest
