@@ -145,7 +145,7 @@ def _print_entry(one: xr.Dataset) -> None:
     for a in ansaetze:
         number, code = float(one["overall_error"].sel(ansatz=a)), int(one["overall"].sel(ansatz=a))
         console.say(f"{a}: overall {_cell(number, code)}")
-        _print_flags(a, int(one["flags"].sel(ansatz=a)), None)
+        _print_flags(a, int(one["flags"].sel(ansatz=a)), float(one["coherent_sites"].sel(ansatz=a)))
 
 
 def _print_points(found: xr.Dataset) -> None:
@@ -198,12 +198,12 @@ def _print_many(found: xr.Dataset, ansaetze: list[str]) -> None:
                 console.say(f"{a}: {count} of {total} points: {sentence}")
 
 
-def _print_flags(ansatz: str, bits: int, sites: float | None) -> None:
+def _print_flags(ansatz: str, bits: int, sites: float) -> None:
     for flag, sentence in verdicts.SENTENCES.items():
         if bits & int(flag):
             number = ""
-            if flag == verdicts.Flag.DEPLETION_DIVERGES and sites is not None and np.isfinite(sites) and sites > 0:
-                number = f" ({sites:.3g})"
+            if flag == verdicts.Flag.DEPLETION_DIVERGES and np.isfinite(sites) and sites > 0:
+                number = f" ({sites:.3g} sites)"
             console.say(f"  {ansatz}: {sentence}{number}")
 
 

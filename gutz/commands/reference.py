@@ -43,7 +43,7 @@ def run_make(
     if as_json:
         console.write_json({"file": str(path), "made": made, "kept": kept})
     else:
-        console.say(f"{made} entries made, {kept} kept, in {console.duration(time.monotonic() - start)}: {path}")
+        console.say(f"entries: {made} made, {kept} kept, in {console.duration(time.monotonic() - start)}: {path}")
     return 0
 
 

@@ -52,11 +52,11 @@ def compare(
     if what is None or isinstance(what, str | list | tuple):
         return of_entries(every, None if what is None else [what] if isinstance(what, str) else list(what), names, kept)
     if isinstance(what, Mixture):
-        _check_dimension(what.dim)
+        _check_mixture(what)
         solutions = {name: solve(what.flat(), ansatz=name) for name in names}
         return _of_solutions(every, solutions, kept)
     if isinstance(what, Solution):
-        _check_dimension(what.mixture.dim)
+        _check_mixture(what.mixture)
         return _of_solutions(every, {what.ansatz: what}, kept)
     if isinstance(what, xr.Dataset):
         return _of_run(every, what, kept)
@@ -96,6 +96,7 @@ def _entry_dataset(some: References, judged: dict[str, Judgement]) -> xr.Dataset
         "overall_error": (per[:2], stacked("number")),
         "overall": (per[:2], stacked("verdict")),
         "flags": (per[:2], stacked("flags")),
+        "coherent_sites": (per[:2], stacked("coherent_sites")),
         "mu": ("entry", [edges[0] for edges in map(_edges, some.datasets)]),
         "gap": ("entry", [edges[1] for edges in map(_edges, some.datasets)]),
     }
@@ -146,10 +147,11 @@ def _of_solutions(every: dict[int, References], solutions: dict[str, Solution], 
     t = np.asarray(mixture.t)[..., 0].reshape(size, mixture.species)
     U = np.asarray(mixture.U).reshape(size, mixture.species)
     U12 = np.asarray(mixture.U12).reshape(size)
+    t = np.where(t > 0, t, np.nan)  # without hopping there is nothing near
     parts = []
     for name, outputs in found.items():
         T = np.asarray(solutions[name].T).reshape(size)
-        hard = np.full(size, mixture.n_max == 1) | (U / np.where(t > 0, t, 1) >= HARD_CORE).all(-1)
+        hard = np.full(size, mixture.n_max == 1) | (U / t >= HARD_CORE).all(-1)
         places = Places(t, U, U12, outputs["filling"], T, hard)
         parts.append(_point_dataset(every, places, name, outputs, kept))
     return _described(xr.concat(parts, "ansatz", coords="minimal", compat="override", join="override"))
@@ -159,7 +161,6 @@ def _point_dataset(
     every: dict[int, References], places: Places, ansatz: str, found: dict[str, NDArray[Any]], kept: Path | None
 ) -> xr.Dataset:
     """One ansatz at points: estimates where references are near, flags everywhere."""
-    _check_places(places)
     each = [{name: values[i] for name, values in found.items()} for i in range(places.size)]
     said = np.full((places.size, len(NAMES)), np.nan)
     for i, outputs in enumerate(each):
@@ -220,6 +221,7 @@ def _of_run(every: dict[int, References], run: xr.Dataset, kept: Path | None) ->
     t = t[..., 0] if "direction" in run["t"].dims else np.repeat(t.reshape(size, 1), species, 1)
     U = flat("U").reshape(size, -1) * np.ones((1, species))
     U12 = flat("U12") if species == 2 else np.zeros(size)
+    t = np.where(t > 0, t, np.nan)  # without hopping there is nothing near
     places = Places(t, U, U12, found["filling"], flat("T"), flat("n_max") == 1)
     whole = _point_dataset(every, places, str(run.attrs.get("ansatz", ANSATZE[0])), found, kept)
     # The run's axes return as dimensions of their own.
@@ -228,14 +230,15 @@ def _of_run(every: dict[int, References], run: xr.Dataset, kept: Path | None) ->
     return _described(folded).assign_attrs(axes=axes)
 
 
+def _check_mixture(mixture: Mixture) -> None:
+    _check_dimension(mixture.dim)
+    if mixture.sublattices > 1:
+        raise InputError("offset is not 0; the references are chains without a superlattice, nothing can be compared")
+
+
 def _check_dimension(dim: int) -> None:
     if dim != 1:
         raise InputError(f"dim = {dim}; the references are chains, so only one-dimensional mixtures can be compared")
-
-
-def _check_places(places: Places) -> None:
-    if np.any(places.t <= 0):
-        raise InputError("t = 0 at some point; without hopping there is nothing to compare")
 
 
 def _described(dataset: xr.Dataset) -> xr.Dataset:

@@ -26,7 +26,8 @@ _PHASE = NAMES.index("phase")
 @dataclass(frozen=True, eq=False)
 class Judgement:
     """One ansatz at every entry. errors, reference, predicted: (entries, observables), nan where not judged; the two
-    values are means over the species. number, verdict: overall (entries,). flags: bits (entries,)."""
+    values are means over the species. number, verdict: overall (entries,). flags: bits, coherent_sites: see there, both
+    (entries,)."""
 
     ansatz: str
     errors: Floats
@@ -35,6 +36,7 @@ class Judgement:
     number: Floats
     verdict: NDArray[np.int8]
     flags: NDArray[np.int32]
+    coherent_sites: Floats
 
 
 @dataclass(frozen=True, eq=False)
@@ -73,12 +75,14 @@ def judge(references: References, ansatz: str, kept: Path | None = predictions.S
             right = verdicts.same_phase(said[number, _PHASE], reference[number, _PHASE])
             errors[number, _PHASE] = 0.0 if right else 1.0
     number_, code = verdicts.overall(errors, _PHASE)
-    return Judgement(ansatz, errors, reference, said, number_, code, flags(found, references.places))
+    coherent = np.array([coherent_sites(each, entry.T) for each, entry in zip(found, references.entries, strict=True)])
+    return Judgement(ansatz, errors, reference, said, number_, code, flags(found, references.places), coherent)
 
 
 def interpolate(points: Places, references: References, judgement: Judgement) -> Estimate:
     """Errors between the entries: means weighted by 1/d^2 over those nearby, each error counted as at most 1."""
     far, weights = references.weights(points)
+    far = np.where(np.isnan(far), np.inf, far)
     errors = np.minimum(judgement.errors, 1.0)
     shape = (points.size, len(NAMES))
     mean, lowest, highest = np.full(shape, np.nan), np.full(shape, np.nan), np.full(shape, np.nan)
@@ -104,7 +108,7 @@ def flags(found: Sequence[Mapping[str, Any]], places: Places) -> NDArray[np.int3
         return np.array([np.nansum(one[name]) for one in found])
 
     lockable = places.commensurate & (places.T == 0)
-    return verdicts.flags(each("phase"), each("condensate"), each("status").astype(int), lockable)
+    return verdicts.flags(each("phase"), each("condensate"), np.maximum(each("status"), 0).astype(int), lockable)
 
 
 def coherent_sites(found: Mapping[str, Any], T: float) -> float:

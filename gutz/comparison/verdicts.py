@@ -56,8 +56,8 @@ class Flag(IntFlag):
 SENTENCES = {
     Flag.LONG_RANGE_CLAIMED: "the order parameter claims long-range order; in one dimension there is none, at best an "
     "algebraic decay",
-    Flag.DEPLETION_DIVERGES: "the depletion of the condensate grows without bound with the length of the chain; the "
-    "condensate density means something only for chains shorter than the stated number of sites",
+    Flag.DEPLETION_DIVERGES: "the condensate's depletion grows without bound with the length of the chain; its density "
+    "means something only over distances on which mean field's own response keeps coherence",
     Flag.DRESSING_LARGE: "the second-order term is not small against the first-order one",
     Flag.LOCKING_MISSED: "the bare order parameter says superfluid, but its own Luttinger parameter is below 2, where "
     "whole-number filling locks; the label follows that rule",

@@ -20,8 +20,12 @@ from gutz.reference.plan import Entry
 
 Floats = NDArray[np.float64]
 
-_LOCKING_K = 2.0
-"""Luttinger parameter below which whole-number filling locks (Giamarchi, Quantum Physics in One Dimension, 2003)."""
+_LOCKING_DIMENSION = 2.0
+"""Scaling dimension, sum_ab K_ab, below which the lattice locks a whole total filling; K itself for one species
+(Giamarchi, Quantum Physics in One Dimension, 2003)."""
+
+_GAPLESS = 0.25
+"""Luttinger parameter of a channel above which it has no gap; with one, fluctuations do not grow and it tends to 0."""
 
 _STAGGERED = 0.01
 """Staggered density correlation at the largest stored distance above which there is a density wave."""
@@ -57,7 +61,7 @@ def extrapolate(entry: Entry, raw: xr.Dataset) -> xr.Dataset:
 
 def _limit(entry: Entry, raw: xr.Dataset, source: str) -> tuple[Floats, Floats]:
     """Bulk value and error of one summed quantity, of the shape it has on one chain."""
-    full = np.flatnonzero(raw["bond"].values == entry.bond)
+    full = _settled(entry, raw)
     lengths = raw["length"].values[full].astype(float)
     sums = raw[source].values[full]
     slope = (sums[-1] - sums[-2]) / (lengths[-1] - lengths[-2])
@@ -73,32 +77,68 @@ def _limit(entry: Entry, raw: xr.Dataset, source: str) -> tuple[Floats, Floats]:
     return np.asarray(value), np.asarray(error)
 
 
+def _settled(entry: Entry, raw: xr.Dataset) -> NDArray[np.intp]:
+    """Runs with all states kept whose sweeps settled; all of them where fewer than two did."""
+    full = raw["bond"].values == entry.bond
+    settled = np.flatnonzero(full & (raw["converged"].values > 0))
+    return settled if settled.size > 1 else np.flatnonzero(full)
+
+
 def _laws(whole: xr.Dataset, entry: Entry) -> dict[str, Any]:
-    """How correlators fall off on the longest chain, and Luttinger parameters from number fluctuations."""
+    """How correlators fall off on the longest chain, and Luttinger parameters from number fluctuations.
+
+    An exponent is the mean of what the correlator and the fluctuations say; half their difference is its error.
+    """
     made: dict[str, Any] = {}
     sites = int(whole["length"].values[-1])
+    K = np.full((entry.species,) * 2, np.nan)
+    if entry.T == 0 and whole["converged"].values[-1] > 0:
+        every = whole["fluctuation"].values
+        fluctuation = every.reshape(-1, every.shape[-1])
+        K = np.array([decay.luttinger(row, sites, entry.filling[0]) for row in fluctuation]).reshape(K.shape)
+        words = "Luttinger parameters from number fluctuations: 1 for hard-core, infinite for free bosons"
+        made["luttinger"] = (("species", "species_"), K, {"long_name": words, "units": "1"})
+    expected = _expected_exponents(K)
     for name in ("one_body", "pair", "antipair"):
         if f"middle_{name}" not in whole:
             continue
         values = whole[f"middle_{name}"]
-        rows = np.atleast_2d(values.values)
-        laws = [decay.law(row, sites, 0.0 if entry.T > 0 else 0.5) for row in rows]
-        dims = values.dims[:-1]
-        for key, words, units in (
-            ("exponent", "exponent of the algebraic law", "1"),
-            ("exponent_error", "error of the exponent", "1"),
-            ("decay_length", "length of the exponential law", "sites"),
-            ("algebraic", "1 where the algebraic law fits better than the exponential one", "1"),
+        laws = [decay.law(row, sites, 0.0 if entry.T > 0 else 0.5) for row in np.atleast_2d(values.values)]
+        fitted = np.array([law.exponent for law in laws])
+        said = np.broadcast_to(expected[name], fitted.shape)
+        algebraic = np.where(np.isnan(said), [law.algebraic for law in laws], np.isfinite(said))
+        for key, numbers, words, units in (
+            ("exponent", (fitted + said) / 2, "exponent of the algebraic law", "1"),
+            ("exponent_error", np.abs(fitted - said) / 2, "error of the exponent", "1"),
+            ("decay_length", np.array([law.decay_length for law in laws]), "length of an exponential law", "sites"),
+            ("algebraic", algebraic.astype(float), "1 where there is a power law", "1"),
         ):
-            numbers = np.array([getattr(law, key) for law in laws], dtype=float)
+            dims = values.dims[:-1]
             made[f"{name}_{key}"] = (dims, numbers if dims else numbers[0], {"long_name": words, "units": units})
-    if entry.T == 0:
-        species = range(entry.species)
-        fluctuation = whole["fluctuation"].values
-        K = np.array([[decay.luttinger(fluctuation[a, b], sites) for b in species] for a in species])
-        words = "Luttinger parameters from number fluctuations: 1 for hard-core, infinite for free bosons"
-        made["luttinger"] = (("species", "species_"), K, {"long_name": words, "units": "1"})
     return made
+
+
+def _expected_exponents(K: Floats) -> dict[str, Floats]:
+    """Exponents that follow from Luttinger parameters; infinite where a gap makes an exponential, nan if unknown."""
+    if len(K) == 1:
+        # The fluctuations of one species do not tell a small gap from none: the correlator decides.
+        return {"one_body": 1 / (2 * K[0]) if K[0, 0] > _GAPLESS else np.array([np.nan])}
+    pair, antipair = K.sum() / 4, (K[0, 0] + K[1, 1] - 2 * K[0, 1]) / 4
+    if np.isnan(pair):
+        return dict.fromkeys(("one_body", "pair", "antipair"), np.array([np.nan]))
+    if min(pair, antipair) > _GAPLESS and np.linalg.eigvalsh(K).min() > 0:
+        inverse = np.linalg.inv(K)
+        across = inverse[0, 1]
+        return {
+            "one_body": np.diag(inverse) / 2,
+            "pair": np.array([inverse.trace() / 2 + across]),
+            "antipair": np.array([inverse.trace() / 2 - across]),
+        }
+    return {
+        "one_body": np.array([np.inf]),
+        "pair": np.array([1 / (2 * pair) if pair > _GAPLESS else np.inf]),
+        "antipair": np.array([1 / (2 * antipair) if antipair > _GAPLESS else np.inf]),
+    }
 
 
 def _phase(whole: xr.Dataset, entry: Entry) -> Phase:
@@ -108,28 +148,22 @@ def _phase(whole: xr.Dataset, entry: Entry) -> Phase:
     total = sum(entry.filling)
     commensurate = abs(total - round(total)) < 1e-9
     moving = whole["one_body_algebraic"].values > 0
+    K = whole["luttinger"].values.sum() if "luttinger" in whole else np.nan
+    # At a whole total filling the lattice holds the total density where its operator's dimension is below 2.
+    held = commensurate and K < _LOCKING_DIMENSION
     if entry.species == 1:
-        if commensurate and (not moving[0] or whole["luttinger"].values[0, 0] < _LOCKING_K) and entry.n_max > 1:
+        if commensurate and entry.n_max > 1 and (held or not moving[0]):
             return Phase.MOTT
         return Phase.SUPERFLUID if moving[0] else Phase.UNDECIDED
     if moving.all():
-        # At a whole total filling the lattice holds the total density where its operator's dimension is below 2.
-        held = commensurate and whole["luttinger"].values.sum() < _LOCKING_K
         return Phase.COUNTERFLOW if held else Phase.SUPERFLUID
-    if moving.any():
-        return Phase.SUPERFLUID_1 if moving[0] else Phase.SUPERFLUID_2
     staggered = whole["density"].values[..., -1] * (-1.0) ** (whole.sizes["distance"] - 1)
-    pair, antipair = (_falls_as(whole, name) for name in ("pair", "antipair"))
-    if staggered[0, 0] > _STAGGERED and min(pair, antipair) == np.inf:
-        return Phase.NEEL if staggered[0, 1] < 0 else Phase.DENSITY_WAVE
-    if min(pair, antipair) < np.inf:
-        return Phase.PAIRED if pair < antipair else Phase.COUNTERFLOW
-    return Phase.MOTT if commensurate else Phase.UNDECIDED
-
-
-def _falls_as(whole: xr.Dataset, name: str) -> float:
-    """Exponent of an algebraic correlator, infinite for an exponential one."""
-    return float(whole[f"{name}_exponent"]) if float(whole[f"{name}_algebraic"]) > 0 else np.inf
+    pair, antipair = (bool(whole[f"{name}_algebraic"] > 0) for name in ("pair", "antipair"))
+    if not pair and not antipair:
+        if staggered[0, 0] > _STAGGERED:
+            return Phase.NEEL if staggered[0, 1] < 0 else Phase.DENSITY_WAVE
+        return Phase.MOTT if commensurate else Phase.UNDECIDED
+    return Phase.PAIRED if pair else Phase.COUNTERFLOW
 
 
 def _exact(entry: Entry, raw: xr.Dataset) -> xr.Dataset:

@@ -24,10 +24,9 @@ _FLOOR = 1e-9
 
 
 class Law(NamedTuple):
-    """How a correlator falls: the exponent of the algebraic law with its error, the length of the exponential one."""
+    """How a correlator falls: exponent of the algebraic law, length of the exponential one, whether the first fits."""
 
     exponent: float
-    exponent_error: float
     decay_length: float
     algebraic: float
 
@@ -35,34 +34,43 @@ class Law(NamedTuple):
 def law(values: Floats, sites: int, power: float = 0.5) -> Law:
     """Fit both laws to a correlator by span (1 .. sites - 1), and tell which fits better.
 
-    The exponential law carries a factor r^-power: 1/2 for a gap, 0 for warmth. The exponent's error is the change
-    between the nearer and the farther half of the spans. A correlator too small to fit is exponential, length nan.
+    The exponential law carries a factor r^-power: 1/2 for a gap, 0 for warmth. Neighbouring spans are averaged, since
+    correlators may alternate. A correlator too small to fit is exponential, length nan.
     """
     span = np.arange(1, sites)
     used = (span >= _FIRST) & (span <= max(_LAST * sites, _FIRST + 3)) & (values > _FLOOR)
     if used.sum() < 4:
-        return Law(np.nan, np.nan, np.nan, 0.0)
+        return Law(np.nan, np.nan, 0.0)
     r, log_value = span[used].astype(float), np.log(values[used])
-    log_f = np.log(_conformal(span[used], sites))
-    eta, rest_algebraic = _line(log_f, log_value)
-    rate, rest_exponential = _line(r, log_value + power * np.log(r))
-    half = len(r) // 2
-    error = abs(_line(log_f[:half], log_value[:half])[0] - _line(log_f[half:], log_value[half:])[0])
+    eta, rest_algebraic = _line(_smooth(np.log(_conformal(span[used], sites))), _smooth(log_value))
+    rate, rest_exponential = _line(_smooth(r), _smooth(log_value + power * np.log(r)))
     whole_window = used.sum() >= 0.8 * ((span >= _FIRST) & (span <= _LAST * sites)).sum()
     algebraic = rest_algebraic <= rest_exponential and whole_window
     length = -1 / rate if rate < 0 else np.inf
-    return Law(float(eta), float(error), float(length), float(algebraic))
+    return Law(float(eta), float(length), float(algebraic))
 
 
-def luttinger(fluctuation: Floats, sites: int) -> float:
-    """K (or an entry of its matrix) from the (co)variance of atoms left of every cut, shape (sites - 1,)."""
-    cut = np.arange(1, sites)
-    # Neighbouring cuts are averaged: fluctuations alternate where the filling is one half.
-    smooth = (fluctuation[1:] + fluctuation[:-1]) / 2
-    middle = (cut[1:] + cut[:-1]) / 2
-    used = (middle >= sites / 6) & (middle <= 5 * sites / 6)
-    slope, _ = _line(np.log(np.sin(np.pi * (middle[used] + 0.5) / (sites + 1))), smooth[used])
+def luttinger(fluctuation: Floats, sites: int, filling: float) -> float:
+    """K (or an entry of its matrix) from the (co)variance of atoms left of every cut, shape (sites - 1,).
+
+    The cuts of the middle two thirds are fitted. The ends bring ripples of wavevector 2 pi filling: both sides of the
+    fit are averaged over one of their periods.
+    """
+    share = abs(filling - round(filling))
+    period = round(1 / share) if share > 0.05 else 2
+    window = np.ones(period) / period
+    x = np.arange(1, sites) + 0.5
+    rise = np.convolve(np.log(np.sin(np.pi * x / (sites + 1))), window, mode="valid")
+    smooth = np.convolve(fluctuation, window, mode="valid")
+    middle = np.convolve(x, window, mode="valid")
+    used = np.abs(middle - (sites + 1) / 2) <= sites / 3
+    slope, _ = _line(rise[used], smooth[used])
     return float(2 * np.pi**2 * slope)
+
+
+def _smooth(values: Floats) -> Floats:
+    """Means of neighbours."""
+    return (values[1:] + values[:-1]) / 2
 
 
 def _conformal(span: NDArray[np.int64], sites: int) -> Floats:

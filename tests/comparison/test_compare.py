@@ -203,6 +203,7 @@ def test_a_run_is_compared_point_by_point(points):
     ("what", "words"),
     [
         (lambda: gutz.Mixture(t=0.1, U=1.0, mu=0.4, dim=3, species=1), "dim = 3"),
+        (lambda: gutz.Mixture(t=0.1, U=1.0, mu=0.4, dim=1, species=1, offset=0.2), "offset"),
         (lambda: "one-unit-U-300", "did you mean"),
         (lambda: xr.Dataset(attrs={"axes": []}), "dim = 0"),
         (lambda: 5, "must be a mixture"),

@@ -122,7 +122,7 @@ def judgement(errors):
     values = np.full((len(errors), len(NAMES)), np.nan)
     values[:, 0] = errors
     blank = np.zeros(len(errors))
-    return Judgement("product", values, values, values, blank, blank.astype(np.int8), blank.astype(np.int32))
+    return Judgement("product", values, values, values, blank, blank.astype(np.int8), blank.astype(np.int32), blank)
 
 
 STRENGTHS = np.array([4.0, 6.0, 40.0])
