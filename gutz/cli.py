@@ -133,6 +133,7 @@ def solve(**options: Any) -> int:
     metavar="N",
     help="Processes that compute; 0: this one [default: one per core where it pays].",
 )
+@click.option("--scheduler", metavar="ADDRESS", help="Compute on a Dask cluster, for example tcp://10.0.0.1:8786.")
 @click.option(
     "--chunk-limit",
     type=click.FloatRange(min=1.0),

@@ -25,6 +25,7 @@ def run(
     resume: bool,
     netcdf: bool,
     workers: int | None,
+    scheduler: str | None,
     chunk_limit: float | None,
     as_json: bool,
     quiet: bool,
@@ -37,7 +38,8 @@ def run(
     with console.progress(file.stem, quiet, points) as progress:
         outcome = runner.run(
             file, out, overrides=overrides, resume=resume, force=force, progress=progress,
-            notice=lambda words: console.note(words, quiet), workers=workers, limit=chunk_limit,
+            notice=lambda words: console.note(words, quiet), workers=workers, scheduler=scheduler,
+            limit=chunk_limit,
         )  # fmt: skip
     files = [store.NAME]
     if not outcome.stopped:

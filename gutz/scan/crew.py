@@ -41,6 +41,10 @@ class Crew(Executor, Protocol):
         """Give up everything at work and start over."""
         ...
 
+    def check(self) -> None:
+        """Look whether anybody is still there, every second in which nothing is finished."""
+        ...
+
 
 class Here:
     """The crew that uses no other process: the call is made at once, in place."""
@@ -59,6 +63,9 @@ class Here:
     def renew(self) -> None:
         """Nothing can be lost here."""
 
+    def check(self) -> None:
+        """We are here."""
+
 
 class Others:
     """Somebody else's executor: it cannot be started anew."""
@@ -70,6 +77,9 @@ class Others:
     def renew(self) -> None:
         """Raise ResourceError."""
         raise ResourceError("the processes that computed have died; what is done is kept: continue with --resume")
+
+    def check(self) -> None:
+        """Theirs to look after."""
 
 
 @dataclass(frozen=True)
@@ -184,6 +194,7 @@ class _Work:
         if broken:
             self._lost()
         elif not finished:
+            self._crew.check()
             self._check_time()
 
     def _lost(self) -> None:

@@ -7,6 +7,7 @@ A chunk is computed by `compute_chunk(plan, index)`, a plain function of plain d
 processes or on a cluster (`gutz.scan.crew`). Only this process writes.
 """
 
+import math
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
@@ -20,6 +21,7 @@ import zarr
 from gutz.errors import GutzError, InputError
 from gutz.scan import document, estimate, guard, paths, schema, spec, store
 from gutz.scan.chunk import compute_chunk
+from gutz.scan.cluster import PER_WORKER, Cluster
 from gutz.scan.crew import Crew, Executor, Failed, Here, Others, results
 from gutz.scan.document import Document
 from gutz.scan.guard import Notice
@@ -71,6 +73,7 @@ def run(
     executor: Executor | None = None,
     in_flight: int = 1,
     workers: int | None = 0,
+    scheduler: str | None = None,
     limit: float | None = None,
 ) -> Outcome:
     """Compute every point of a scan file and save it.
@@ -79,8 +82,9 @@ def run(
     as "mixture.T=0.1". resume: continue a stopped run. force: replace an existing one. progress: called after
     every chunk. notice: called with what to tell a person meanwhile. workers: processes to compute in; 0 for none but
     this one, None for one per core where that pays (a script that asks for them needs the usual
-    `if __name__ == "__main__":`). executor, in_flight: somebody else's executor in their place, and chunks handed to
-    it at once. limit: seconds a chunk may take in worker processes.
+    `if __name__ == "__main__":`). scheduler: address of a Dask scheduler whose workers compute instead. executor,
+    in_flight: somebody else's executor instead, and chunks handed to it at once. limit: seconds a chunk may take in
+    worker processes.
     Raises InputError (mistakes in the file), OutputError (output exists or is in use), DataError (existing run
     damaged), ResourceError (disk, or processes that keep dying). At Ctrl-C or SIGTERM what is at work is finished and
     saved, and then `stopped` is set.
@@ -94,7 +98,7 @@ def run(
         guard.check_disk(folder, schema.bytes_per_point(full) * full.points)
         target = _opened(folder, full, source, resume)
         todo = [index for index in full.indices() if not target.done(index)]
-        with guard.stoppable(notice) as stop, crew_of(full, len(todo), executor, in_flight, workers) as crew:
+        with guard.stoppable(notice) as stop, crew_of(full, len(todo), executor, in_flight, workers, scheduler) as crew:
             return _work(folder, full, target, todo, progress, stop, crew, limit or estimate.time_limit(full))
 
 
@@ -123,21 +127,32 @@ def load(path: str | Path, overrides: Sequence[str]) -> tuple[Document, Plan]:
 
 
 @contextmanager
-def crew_of(full: Plan, pieces: int, executor: Executor | None, in_flight: int, workers: int | None) -> Iterator[Crew]:
-    """Who computes: a given executor, this process, or worker processes, which end with the context."""
+def crew_of(
+    full: Plan,
+    pieces: int,
+    executor: Executor | None,
+    in_flight: int,
+    workers: int | None,
+    scheduler: str | None,
+) -> Iterator[Crew]:
+    """Who computes: a cluster, a given executor, this process, or worker processes that end with the context."""
+    count = min(pieces, estimate.automatic_workers(full) if workers is None else workers)
     if executor is not None:
         yield Others(executor, in_flight)
-        return
-    count = min(pieces, estimate.automatic_workers(full) if workers is None else workers)
-    if count == 0:
+    elif scheduler is not None:
+        with Cluster(scheduler) as cluster:
+            yield cluster
+    elif count == 0:
         yield Here()
-        return
-    with Workers(count) as crew:
-        yield crew
+    else:
+        with Workers(count) as crew:
+            yield crew
 
 
 def memory_of(crew: Crew) -> tuple[int, int]:
-    """Worker processes of this machine, and the most memory held by them and this process, bytes."""
+    """Worker processes, and the most memory held by this process and those on this machine, bytes."""
+    if isinstance(crew, Cluster):
+        return crew.in_flight // PER_WORKER, peak_bytes()
     if isinstance(crew, Workers):
         return crew.in_flight, peak_bytes() + crew.peak_bytes()
     return 0, peak_bytes()
@@ -156,6 +171,8 @@ def _work(
     """Compute what is not done yet, and write it as it comes."""
     total = int(np.prod(full.chunks))
     finished = total - len(todo)
+    # What a cluster's worker is at cannot be ended from here.
+    limit = math.inf if isinstance(crew, Cluster) else limit
     failed: list[tuple[tuple[int, ...], str]] = []
     for index, values in results(crew, partial(compute_chunk, full), todo, stopped=lambda: bool(stop), limit=limit):
         if isinstance(values, Failed):

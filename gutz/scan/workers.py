@@ -48,6 +48,9 @@ class Workers:
         self._kill()
         self._pool = self._started()
 
+    def check(self) -> None:
+        """A process that died has told already: its calls fail with BrokenExecutor."""
+
     def peak_bytes(self) -> int:
         """Sum of the most memory each living process has held, 0 where the system does not tell."""
         return sum(peak_bytes(process.pid) for process in self._context.processes if process.is_alive())
