@@ -1,7 +1,7 @@
 """Speed of the dressed solver as ratios within one run: python tests/bench/dressed.py [points per side]
 
-In:  a grid of hopping and chemical potential over lobes and superfluid, two species, n_max = 3, T > 0, for repelling and
-     for attracting species (10^4 points each by default).
+In:  a grid of hopping and chemical potential over lobes and superfluid, two species, n_max = 3, T > 0, for repelling
+     and for attracting species (10^4 points each by default).
 Out: a table on stdout: milliseconds per point of the dressed solver and of the plain numpy loop for the *product*
      ansatz on the same points, their ratios in processor time and on the clock, compilations after the first call.
 The plain loop runs on every 25th point, in pieces between those of the solver, so that other work on the machine
