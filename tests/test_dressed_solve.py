@@ -62,3 +62,13 @@ def test_dataset_has_the_dressing_and_no_residual(counterflow):
     ds = counterflow.to_dataset()
     assert "dressing" in ds and "residual" not in ds
     assert ds.attrs["ansatz"] == "dressed"
+
+
+def test_flat_density_fields_do_not_move_the_boundary():
+    """In the insulator a density field costs exp(-gap/T), nothing in numbers: neither label nor F may depend on it."""
+    T = np.linspace(0.0115, 0.015, 8)
+    sol = gutz.solve(gutz.Mixture(t=0.0254, U=1.0, U12=0.5, mu=0.25, dim=3, n_max=4, T=T), "dressed")
+    assert set(sol.phase.tolist()) == {gutz.Phase.MOTT} and not sol.status.any()
+    # F of free spins plus the exchange: -T ln 2 per site and a constant. Where the field is found it lowers F by 3e-6.
+    np.testing.assert_allclose(sol.free_energy - sol.free_energy[0], -np.log(2) * (T - T[0]), atol=1e-5)
+    np.testing.assert_allclose(sol.entropy, np.log(2), atol=5e-3)
