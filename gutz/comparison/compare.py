@@ -153,7 +153,8 @@ def _of_solutions(every: dict[int, References], solutions: dict[str, Solution], 
         T = np.asarray(solutions[name].T).reshape(size)
         hard = np.full(size, mixture.n_max == 1) | (U / t >= HARD_CORE).all(-1)
         places = Places(t, U, U12, outputs["filling"], T, hard)
-        parts.append(_point_dataset(every, places, name, outputs, kept))
+        mu = np.asarray(solutions[name].mu).reshape(size, -1)[:, 0] / t[:, 0]
+        parts.append(_point_dataset(every, places, name, outputs, kept).assign(mu=("point", mu)))
     return _described(xr.concat(parts, "ansatz", coords="minimal", compat="override", join="override"))
 
 
@@ -224,6 +225,7 @@ def _of_run(every: dict[int, References], run: xr.Dataset, kept: Path | None) ->
     t = np.where(t > 0, t, np.nan)  # without hopping there is nothing near
     places = Places(t, U, U12, found["filling"], flat("T"), flat("n_max") == 1)
     whole = _point_dataset(every, places, str(run.attrs.get("ansatz", ANSATZE[0])), found, kept)
+    whole = whole.assign(mu=("point", flat("mu").reshape(size, -1)[:, 0] / t[:, 0]))
     # The run's axes return as dimensions of their own.
     index = np.unravel_index(np.arange(size), shape) if axes else ()
     folded = whole.assign_coords({axis: ("point", run[axis].values[i]) for axis, i in zip(axes, index, strict=True)})
@@ -262,7 +264,7 @@ def _described(dataset: xr.Dataset) -> xr.Dataset:
         "flags": ("Doubts that need no reference", bits),
         "reference": ("Value of the reference", {"description": "energies in the unit of the entry"}),
         "prediction": ("Value of mean field", {"description": "energies in the unit of the entry or mixture"}),
-        "mu": ("Chemical potential, middle of the gap, over t", {}),
+        "mu": ("Chemical potential over t", {"description": "species 1; of a reference, the middle of its gap"}),
         "gap": ("Width of the gap in the chemical potential, finite chain, over t", {}),
         "distance": ("Distance to the nearest reference", {"description": f"none is near above {NEARBY:g}"}),
         "coherent_sites": ("Sites over which mean field's own stiffness keeps coherence above 1/e", {}),

@@ -120,7 +120,7 @@ def flags(
 ) -> NDArray[np.int32]:
     """Flag bits per point. condensate: |phi|^2 summed over species; lockable: whole total filling at T = 0."""
     label, total, bits = np.asarray(phase), np.asarray(condensate), np.asarray(status)
-    superfluid = np.isin(label, (Phase.SUPERFLUID, Phase.SUPERSOLID))
+    locked = np.isin(label, (*_STILL, Phase.COUNTERFLOW))
     code = np.where(np.isin(label, _ORDERED) | (total > 0), int(Flag.LONG_RANGE_CLAIMED), 0)
     code = code | np.where(total > 0, int(Flag.DEPLETION_DIVERGES), 0)
     for flag, cause in (
@@ -129,5 +129,5 @@ def flags(
         (Flag.UNTRUSTED, UNTRUSTED),
     ):
         code = code | np.where((bits & int(cause)) > 0, int(flag), 0)
-    code = code | np.where((total > 0) & np.asarray(lockable) & ~superfluid, int(Flag.LOCKING_MISSED), 0)
+    code = code | np.where((total > 0) & np.asarray(lockable) & locked, int(Flag.LOCKING_MISSED), 0)
     return code.astype(np.int32)

@@ -32,6 +32,7 @@ _TWO = {"t": (0.0, 0.30), "y": (-1.05, 1.05)}
 _MU_STEP = 0.25
 """Change of mu/U that counts as a distance of 1."""
 
+_RING = style.LINE_COLOURS[1]
 _MARKERS = {Verdict.QUANTITATIVE: "o", Verdict.QUALITATIVE: "^", Verdict.WRONG: "X", Verdict.NOT_JUDGED: "."}
 _MEANINGS = {
     Verdict.QUANTITATIVE: "quantitative",
@@ -59,17 +60,20 @@ def draw(stored: xr.Dataset, points: xr.Dataset | None = None) -> Figure:
         bar.outline.set_visible(False)
         bar.set_ticks([0, QUANTITATIVE, QUALITATIVE, 1.0], labels=["0", "0.1", "0.5", "1"])
         bar.set_label("Overall error of mean field (dark: do not believe; hatched: no reference nearby)")
-        _legend(figure)
+        _legend(figure, rings=points is not None)
         settle(figure)
         return figure
 
 
-def _legend(figure: Figure) -> None:
+def _legend(figure: Figure, rings: bool) -> None:
     from_lines = [_proxy(marker=_MARKERS[verdict], label=f"reference: {words}") for verdict, words in _MEANINGS.items()]
     lines = [
         _proxy(linestyle="-", label="edge of the Mott lobe, references"),
         _proxy(linestyle="--", label="edge of the Mott lobe, bare mean field"),
     ]
+    if rings:
+        lines.append(_proxy(marker="o", markerfacecolor="none", markeredgecolor=_RING, markeredgewidth=2.0,
+                            markersize=10, label="points asked about"))  # fmt: skip
     figure.legend(handles=[*from_lines, *lines], loc="outside lower left", ncols=3, frameon=False,
                   fontsize=style.SMALL_SIZE + 0.5)  # fmt: skip
 
@@ -156,7 +160,7 @@ def _two_species(panel: Axes, stored: xr.Dataset) -> None:
     phases = some["reference"].sel(observable="phase").values
     for phase, place in ((Phase.COUNTERFLOW, 0.93), (Phase.PAIRED, -0.93), (Phase.SUPERFLUID, 0.12)):
         if (phases == phase).any():
-            _name(panel, 0.6 * widest, place, WORDS[phase])
+            _name(panel, 0.03 * widest, place, WORDS[phase])
     panel.axhline(0, color=style.PALE_INK, lw=0.6, zorder=3)
     panel.set(xlim=(0, widest), ylim=_TWO["y"], xlabel="t / U", ylabel="Between the species: U12 / U")
 
@@ -227,9 +231,9 @@ def _mark(left: Axes, right: Axes, points: xr.Dataset) -> None:
     two = points["species_count"].values == 2
     fits = two & np.isfinite(strength) & (np.abs(points["filling_1"].values - 0.5) < 0.02)
     if fits.any():
-        right.scatter(1 / strength[fits], (cross / strength)[fits], s=150, facecolors="none", edgecolors="#c4662c",
+        right.scatter(1 / strength[fits], (cross / strength)[fits], s=150, facecolors="none", edgecolors=_RING,
                       linewidths=2.0, zorder=7)  # fmt: skip
     if "mu" in points and (~two).any():
         some = ~two & np.isfinite(points["mu"].values)
         left.scatter(1 / strength[some], points["mu"].values[some] / strength[some], s=150, facecolors="none",
-                     edgecolors="#c4662c", linewidths=2.0, zorder=7)  # fmt: skip
+                     edgecolors=_RING, linewidths=2.0, zorder=7)  # fmt: skip
