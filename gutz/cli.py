@@ -294,6 +294,38 @@ def noise(**options: Any) -> int:
 
 
 @cli.command(
+    short_help="How many shots a peak needs, and how cold it must be.",
+    help=_example(
+        "Example: gutz detect scans/counterflow-detection.toml --at depth=16\n\n"
+        "Shots for the pair or counterflow peak of the file's [imaging] camera, against temperature and entropy.\n\n"
+        "Axes that are neither temperature nor camera need a value each. With --out, numbers and a figure as well."
+    ),
+)
+@_FILE
+@_SET
+@_AT
+@click.option(
+    "--improve", metavar="KNOBS",
+    help="Move settings within bounds to need fewer shots: depth,tof=5:25. Bounds also come from the file's axes.",
+)  # fmt: skip
+@click.option("--shots-out", metavar="FILE", help="Write synthetic pictures of the coldest point (.nc, HDF5).")
+@click.option("--pictures", default=100, show_default=True, help="How many synthetic pictures of each species.")
+@click.option("--side", default=256, show_default=True, help="Pixels along a side of a synthetic picture.")
+@click.option("--seed", default=0, show_default=True, help="Of the synthetic pictures.")
+@_out("Write detect.nc and a figure into this folder.")
+@_JSON
+@_QUIET
+@_FORCE
+@_DEBUG
+def detect(**options: Any) -> int:
+    """Detectability."""
+    _load_numerics(quiet=options["quiet"])
+    from gutz.commands import detect as command
+
+    return command.run(**options)
+
+
+@cli.command(
     short_help="Check a file and estimate the work.",
     help=_example(
         "Example: gutz check scans/rubidium-cubic.toml\n\n"

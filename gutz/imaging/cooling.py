@@ -25,7 +25,7 @@ FloatArray = NDArray[np.float64]
 ACCURACY = 5e-3
 """Relative error of the atom numbers."""
 
-LINE_NODES, PLANE_STEPS = 24, 9
+LINE_NODES, CUTS, PLANE_STEPS = 24, 4, 9
 _ROUNDS = 12
 _TAIL = 8.0
 
@@ -44,8 +44,8 @@ def at_temperatures(gas: LocalGas, trap: Trap, atoms: FloatArray, T: FloatArray)
     middle = T[[T.size // 2]]
     start = first_guess(gas, trap, atoms, float(middle[0]))[None, :-1]
     nodes = _nodes(gas, trap, start[0], float(T.max()))
-    start, _, _ = _climb(gas, nodes, atoms, start, middle)
-    nodes = _nodes(gas, trap, start[0], float(T.max()))
+    start, seen, _ = _climb(gas, nodes, atoms, start, middle)
+    nodes = _bordered(trap, nodes, seen)
     mu, states, met = _climb(gas, nodes, atoms, np.repeat(start, T.size, 0), T)
     found = []
     for i, temperature in enumerate(T):
@@ -69,6 +69,23 @@ def _nodes(gas: LocalGas, trap: Trap, mu: FloatArray, hottest: float) -> Nodes:
         return geometry.plane_nodes(trap, reach, PLANE_STEPS)
     end = float((reach / trap.ratio).max())
     return geometry.line_nodes(trap, np.linspace(0.0, end, LINE_NODES))
+
+
+def _bordered(trap: Trap, nodes: Nodes, states: States) -> Nodes:
+    """Nodes packed where the phase changes: shells end there, within a cell, and move little with temperature."""
+    if nodes.line is None or nodes.line.size == 1:
+        return nodes
+    phase = states.of("phase")
+    atoms = states.of("filling").sum(-1) > 1e-3
+    cells = np.flatnonzero((phase[1:] != phase[:-1]) & (atoms[1:] | atoms[:-1]))
+    near = np.unique(np.concatenate([cells - 1, cells, cells + 1]))
+    near = near[(near >= 0) & (near < phase.size - 1)]
+    # Beyond the last atoms nothing changes: one node in three will do.
+    kept = np.append(nodes.line[:-1][atoms[:-1] | (np.arange(phase.size - 1) % 3 == 0)], nodes.line[-1])
+    parts = [
+        a + (b - a) * np.arange(1, CUTS) / CUTS for a, b in zip(nodes.line[near], nodes.line[near + 1], strict=True)
+    ]
+    return geometry.line_nodes(trap, np.unique(np.concatenate([kept, *parts])))
 
 
 def _climb(

@@ -87,7 +87,7 @@ def moments(camera: Camera, sample: Sample, made: Geometry) -> Moments:
     x_edge = jnp.minimum(_EDGE * made.wx.max(), half)
     y_edge = jnp.minimum(_EDGE * made.wy.max(), half)
     x, y = x_edge * 0.5 * (nodes + 1.0), y_edge * 0.5 * (nodes + 1.0)
-    cell = jnp.outer(weights, weights) * x_edge * y_edge / camera.pixel**2
+    cell = jnp.asarray(np.outer(weights, weights)) * x_edge * y_edge / camera.pixel**2
     mean = counts(camera, sample, made, x[:, None], y[None, :])
     v = photon_variance(camera, mean)
     weight = mean[0] * mean[1] / ((mean[0] + v[0]) * (mean[1] + v[1]))

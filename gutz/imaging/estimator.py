@@ -150,9 +150,9 @@ def _products(
         factors.append(factor)
         means.append(np.einsum("s,syx->yx", factor, stack.astype(np.float64, copy=False)) / len(stack))
     weights = [np.where(m > 0, m / np.maximum(m + v, 1e-300), 0.0) for m, v in zip(means, white, strict=True)]
-    shape = tuple(
-        fft.next_fast_len(n + 2 * half + 2 * max(abs(o) for o in offset) + 1, real=True) for n in means[0].shape
-    )
+    # Inversion needs a whole convolution; lags only room for themselves.
+    room = 2 * half + 2 * max(abs(o) for o in offset) + 1
+    shape = tuple(fft.next_fast_len(n + (room if middles is None else n), real=True) for n in means[0].shape)
     lags = np.arange(-half, half + 1)
     rows = np.ix_(np.mod(lags + offset[1], shape[0]), np.mod(lags + offset[0], shape[1]))
 
@@ -166,7 +166,6 @@ def _products(
         return np.asarray(whole[np.ix_(y, x)])
 
     middle = None if middles is None else np.round(middles.mean(0)).astype(np.int64)
-    shape = shape if middles is None else _padded(means[0].shape)
     bottom = correlate(weights[0] * means[0], weights[1] * means[1], middle)
     values = np.empty((len(one), lags.size, lags.size))
     for s in range(len(one)):
@@ -174,11 +173,6 @@ def _products(
         b = weights[1] * (factors[1][s] * two[s] - means[1])
         values[s] = correlate(a, b, None if middles is None else middles[s])
     return values, bottom
-
-
-def _padded(shape: tuple[int, ...]) -> tuple[int, ...]:
-    """Room for a whole convolution."""
-    return tuple(fft.next_fast_len(2 * n, real=True) for n in shape)
 
 
 def _measured(values: Floats, bottom: Floats, count: int, half: int, template: Any, seed: int) -> Estimate:

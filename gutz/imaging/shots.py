@@ -195,9 +195,8 @@ def _pairs(
     width = [np.array([float(made.wx[a]), float(made.wy[a])]) for a in (0, 1)]
     atoms = np.asarray(sample.atoms)
     tied = float(sample.regions["pair" if pair else "antipair"].total) * float(made.line)
-    spread = np.array(
-        [np.hypot(float(peak.order_x), float(peak.blur_x)), np.hypot(float(peak.order_y), float(peak.blur_y))]
-    )
+    own = [(peak.order_x, peak.blur_x), (peak.order_y, peak.blur_y)]
+    spread = np.array([np.hypot(float(order), float(blur)) for order, blur in own])
     points = [float(camera.resolution), float(camera.resolution * made.scale)]
     for _ in range(count):
         factor = _number(camera, rng)
@@ -213,7 +212,7 @@ def _pairs(
 
 
 def _partners(first: Floats, pair: bool, ell: float, width: Floats, rng: np.random.Generator) -> Floats:
-    """Places of the partners: at -k or k, and at one of the copies a reciprocal vector away, as the cloud weighs them."""
+    """Places of the partners: -k or k, or a copy a reciprocal vector away, as the cloud weighs them."""
     base = -first if pair else first
     out = np.empty_like(base)
     for axis in (0, 1):
@@ -244,7 +243,7 @@ def _fields(
     phase = _near_field(camera, sample, made, sizes)
     n = screen.points
     step = screen.pixel / screen.fine
-    place = (np.arange(n) - (n - 1) / 2.0) * step
+    place: Floats = (np.arange(n, dtype=np.float64) - (n - 1) / 2.0) * step
     index = np.round(place / step - 0.5).astype(int) if n % 2 == 0 else np.round(place / step).astype(int)
     offset = 0.5 if n % 2 == 0 else 0.0
     ramps = [np.exp(-2j * np.pi * offset * np.arange(size) / points) for size in sizes]
@@ -293,7 +292,7 @@ def _near_field(camera: Camera, sample: Sample, made: Any, sizes: list[int]) -> 
     return found
 
 
-def _envelope(place: Floats, wx: float, wy: float, step: float) -> Floats:
+def _envelope(place: Any, wx: float, wy: float, step: float) -> Floats:
     """Share of the cloud on a fine point divided by the mean of |b(k)|², so that atoms come out right."""
     gx, gy = np.exp(-(place**2) / (2.0 * wx**2)), np.exp(-(place**2) / (2.0 * wy**2))
     return np.outer(gy, gx) * step**2 / (2.0 * np.pi * wx * wy)

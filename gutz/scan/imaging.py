@@ -117,8 +117,8 @@ def of_combination(spec: Any) -> Iterator[tuple[str, str]]:
         yield (
             "imaging.pixel",
             (
-                f"{section.pixel * 1e6:g} um is too large for a picture of {section.picture * 1e6:g} um; the picture must "
-                "be at least 8 pixels wide"
+                f"{section.pixel * 1e6:g} um is too large for a picture of {section.picture * 1e6:g} um; the "
+                "picture must be at least 8 pixels wide"
             ),
         )
     if dim == 2 and section.along != "z":

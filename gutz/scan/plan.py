@@ -95,9 +95,14 @@ class Plan:
 
         Raises InputError where the lattice cannot be computed.
         """
+        found = self.light(picked)
+        return None if found is None else hubbard_parameters(found)
+
+    def light(self, picked: Sequence[Array]) -> OpticalLattice | None:
+        """The lattice itself at the outer product of axis values, as in `lattice`."""
         if self.spec.lattice is None:
             return None
-        return hubbard_parameters(_lattice(self.spec.lattice, self.spec.species, self._grids(picked)))
+        return _lattice(self.spec.lattice, self.spec.species, self._grids(picked))
 
     def settings(self, picked: Sequence[Array], found: HubbardParameters | None) -> dict[str, Any]:
         """Parameters at the outer product of axis values, ready for `gutz.Mixture(**settings)`.
