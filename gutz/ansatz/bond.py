@@ -37,7 +37,7 @@ LINEAR_PART = 0.1
 """Inverse of the time, in units of 1/bandwidth, up to which nodes are spaced evenly; 0.1 needs fewest (measured)."""
 
 COLD_DEGENERACY = 1e-7
-WARM_DEGENERACY = 1e-4
+WARM_DEGENERACY = 1e-6
 _TINY = 1e-12
 
 KINDS = ("full", "pair", "antipair", "normal")

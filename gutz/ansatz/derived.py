@@ -56,7 +56,7 @@ def _responses(
     densities = [names.index(f"nu{i + 1}") for i in range(a)]
 
     def slopes(energy: Array, T: Array, x: Array) -> Array:
-        at = evaluate.look(p._replace(energy=energy, T=T), x, lam, f=f, names=names, cold=cold)
+        at = evaluate.look(p._replace(energy=energy, T=T), x, lam, f=f, names=names, cold=cold, energies=False)
         # mu and nu enter h alike; nu has an explicit part besides.
         in_mu = (at.gradient[..., densities] - at.mean[..., densities] / sublattices).sum(1)
         fields = np.einsum("psk,nsk->pn", at.gradient, along)

@@ -53,13 +53,13 @@ def pick(p: Sites, index: Any) -> Sites:
 
 def look(
     p: Sites, x: Floats, lam: Floats, *, f: Frame, names: tuple[str, ...], cold: bool,
-    parameters: bool = True, nodes: int = 0,
+    energies: bool = True, nodes: int = 0,
 ) -> Look:  # fmt: skip
     """Evaluate functional and gradient.
 
     p: numpy arrays with one batch axis. x: (point, sublattice, field) for the fields in `names`, which the frame must
     allow. lam: (point,), strength of the bond term. cold: every T is 0, the ground state; otherwise every T must be
-    > 0. parameters: also the derivatives in the energies and in T (zero otherwise). nodes: least number of time nodes.
+    > 0. energies: also the derivatives in the energies (zero otherwise). nodes: least number of time nodes.
     Points that are not finite get nan for F, nothing raises.
     """
     size = x.shape[0]
@@ -69,12 +69,12 @@ def look(
         out = look(p, np.where(finite[:, None, None], x, 0.0), lam, f=f, names=names, cold=cold, nodes=nodes)
         return out._replace(free_energy=np.where(finite, out.free_energy, np.nan))
     if size <= PIECE:
-        return _look(p, x, lam, f, names, cold, parameters, nodes)
+        return _look(p, x, lam, f, names, cold, energies, nodes)
     order = np.arange(size) if cold else np.argsort(_effort(p, x), kind="stable")
     whole_out: Look | None = None
     for begin in range(0, size, PIECE):
         index = order[begin : begin + PIECE]
-        part = _look(pick(p, index), x[index], lam[index], f, names, cold, parameters, nodes)
+        part = _look(pick(p, index), x[index], lam[index], f, names, cold, energies, nodes)
         if whole_out is None:
             whole_out = Look(*(np.empty((size, *v.shape[1:])) for v in part))
         for whole, piece in zip(whole_out, part, strict=True):
@@ -166,7 +166,7 @@ def response_kernel(lv: Levels, *, cold: bool) -> Floats:
 
 
 def _look(
-    p: Sites, x: Floats, lam: Floats, f: Frame, names: tuple[str, ...], cold: bool, parameters: bool, nodes: int
+    p: Sites, x: Floats, lam: Floats, f: Frame, names: tuple[str, ...], cold: bool, energies: bool, nodes: int
 ) -> Look:
     Q, lv, deviation, phi = _in_levels(p, x, f, names, cold)
     sublattices, species, k = x.shape[-2], phi.shape[-1], len(names)
@@ -197,10 +197,7 @@ def _look(
     slope_flat = np.diagonal(slope, axis1=-2, axis2=-1) if f.diagonal else slope.reshape(*x.shape[:2], -1)
     gradient -= (flat @ slope_flat[..., None])[..., 0]
     safe = np.where(lam > 0, lam, 1.0)
-    if parameters:
-        derivatives = _in_parameters(p, lv, kernel, Q, mismatch, second, f, cold)
-    else:
-        derivatives = np.zeros_like(p.energy), np.zeros_like(first)
+    derivatives = _in_parameters(p, lv, kernel, Q, mismatch, second, f, cold, energies)
     phi = np.broadcast_to(phi, (*x.shape[:2], species))
     return Look(
         first + second.value, gradient, response, mean, phi, second.value / safe, second.variance / safe,
@@ -238,22 +235,24 @@ def _in_levels(
 
 
 def _in_parameters(
-    p: Sites, lv: Levels, kernel: Floats, Q: Floats, mismatch: Floats, second: Second, f: Frame, cold: bool
-) -> tuple[Floats, Floats]:
-    """Derivatives of F in the energies of the basis states, and in T, at fixed fields."""
-    sublattices, d = mismatch.shape[-2], kernel.shape[-1]
+    p: Sites, lv: Levels, kernel: Floats, Q: Floats, mismatch: Floats, second: Second, f: Frame, cold: bool,
+    energies: bool,
+) -> tuple[Floats, Floats]:  # fmt: skip
+    """Derivatives of F in the energies of the basis states (0 unless asked for), and in T, at fixed fields."""
+    sublattices = mismatch.shape[-2]
     # d<Q>/dh = -K∘Q + <Q> P/T, summed with the mismatch of each field; the state itself is dF_tr/dh.
-    R = (mismatch[..., None, None] * Q).sum(-3)
-    average = lv.inverse_temperature * (np.diagonal(R, axis1=-2, axis2=-1) * lv.weight).sum(-1)
-    states = np.arange(d)
-    shifted = second.slope - kernel * R / sublattices
-    shifted[..., states, states] += average[..., None] * lv.weight / sublattices
-    in_h = shifted.copy()
-    in_h[..., states, states] += lv.weight / sublattices
-    in_energy = ((lv.vectors @ in_h) * lv.vectors).sum(-1)[..., np.argsort(f.order)]
-    if cold:
-        return in_energy, np.zeros_like(second.value)
-    # Averages depend on h/T only, and the bond term is homogeneous of degree -1 in (h, T).
-    excitation = lv.energy - lv.energy.min(-1, keepdims=True)
-    along_h = (np.diagonal(shifted, axis1=-2, axis2=-1) * excitation).sum((-1, -2))
-    return in_energy, -lv.entropy.mean(-1) - (along_h + second.value) / p.T
+    values = (mismatch[..., None] * np.diagonal(Q, axis1=-2, axis2=-1)).sum(-2)
+    average = (lv.inverse_temperature * (values * lv.weight).sum(-1))[..., None] * lv.weight
+    own = average - np.diagonal(kernel, axis1=-2, axis2=-1) * values
+    diagonal = own / sublattices + np.diagonal(second.slope, axis1=-2, axis2=-1)
+    in_T, in_energy = np.zeros_like(second.value), np.zeros_like(p.energy)
+    if not cold:
+        # Averages depend on h/T only, and the bond term is homogeneous of degree -1 in (h, T).
+        excitation = lv.energy - lv.energy.min(-1, keepdims=True)
+        in_T = -lv.entropy.mean(-1) - ((diagonal * excitation).sum((-1, -2)) + second.value) / p.T
+    if energies:
+        states = np.arange(kernel.shape[-1])
+        in_h = second.slope - kernel * (mismatch[..., None, None] * Q).sum(-3) / sublattices
+        in_h[..., states, states] = diagonal + lv.weight / sublattices
+        in_energy = ((lv.vectors @ in_h) * lv.vectors).sum(-1)[..., np.argsort(f.order)]
+    return in_energy, in_T

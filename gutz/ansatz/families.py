@@ -156,7 +156,7 @@ def descend(p: Sites, point: Array, start: Array, scale: Array, *, plan: Plan, c
         lam = np.asarray(plan.stages)[job.stage]
         at = evaluate.look(
             job.sites, job.x.reshape(-1, sublattices, k), lam, f=f, names=plan.names, cold=plan.cold,
-            parameters=False, nodes=plan.nodes,
+            energies=False, nodes=plan.nodes,
         )  # fmt: skip
         finished, accepted = job.step(at, plan)
         if finished.any():
@@ -350,7 +350,7 @@ def onset(p: Sites, x: Array, lam: Array, *, plan: Plan) -> Onset:
     for column in range(n):
         moved = x.copy()
         moved[:, column // species, column % species] += step
-        at = evaluate.look(p, moved, lam, f=f, names=names, cold=plan.cold, parameters=False, nodes=plan.nodes)
+        at = evaluate.look(p, moved, lam, f=f, names=names, cold=plan.cold, energies=False, nodes=plan.nodes)
         H[:, :, column] = at.gradient[..., :species].reshape(-1, n) / step[:, None]
         if column == 0:
             X = _on_diagonal(at.response[..., :species, :species])

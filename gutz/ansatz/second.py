@@ -20,6 +20,7 @@ from gutz.ansatz.bond import COLD_DEGENERACY, WARM_DEGENERACY, Frame
 from gutz.ansatz.gibbs import Levels
 
 Floats = NDArray[np.float64]
+Index = NDArray[np.intp] | slice
 
 NEGLIGIBLE = 52.0
 """Energy above the lowest level, in units of T, from which exp(-E/2T) < 1e-11."""
@@ -194,9 +195,9 @@ class _Dense:
         of_late = (np.swapaxes(self.X, -1, -2) @ Z) * self.late
         of_early = np.einsum("...ct,...cmt->...mt", D, self.by_early)
 
-        def in_full() -> tuple[Floats, Floats]:
-            late = ((Z * tau) @ turned).reshape(product.shape)
-            return late, beta * product - late
+        def in_full(some: Index) -> tuple[Floats, Floats]:
+            late = ((Z[some] * tau[some]) @ turned[some]).reshape(-1, *product.shape[1:])
+            return late, beta[some] * product[some] - late
 
         slope.levels_move((of_late * tau).sum(-1), (of_early * (beta - tau)).sum(-1))
         slope.operators_change(self.channel, self.at, product, in_full)
@@ -222,7 +223,7 @@ class _Blocks:
         early = beta * product - late
         to, fro = ((one[:, None] == states).astype(float) for one in (self.channel.columns, self.channel.rows))
         slope.levels_move((self.X * late).sum(-2) @ to, (self.X * early).sum(-2) @ fro)
-        slope.operators_change(self.channel, self.at, product, lambda: (late, early))
+        slope.operators_change(self.channel, self.at, product, lambda some: (late[some], early[some]))
 
 
 def _cold(lv: Levels, ops: Floats, factor: Floats, f: Frame) -> tuple[Floats, Floats, Floats]:
@@ -251,7 +252,7 @@ def _cold(lv: Levels, ops: Floats, factor: Floats, f: Frame) -> tuple[Floats, Fl
     moved = (X * late).sum(2)
     slope.levels_move(moved.sum(-2), -moved.sum(-1))
     late = late.reshape(flat)
-    slope.operators_change(channel, ops.reshape(flat), product.reshape(flat), lambda: (late, -late))
+    slope.operators_change(channel, ops.reshape(flat), product.reshape(flat), lambda some: (late[some], -late[some]))
     return per_combo, x.sum(-1), slope.matrix()
 
 
@@ -302,22 +303,26 @@ class _Slope:
         self.diagonal[..., : self.kept] -= early
 
     def operators_change(
-        self, channel: _Channel, at: Floats, product: Floats, in_full: Callable[[], tuple[Floats, Floats]]
+        self, channel: _Channel, at: Floats, product: Floats, in_full: Callable[[Index], tuple[Floats, Floats]]
     ) -> None:
         """at: the operators at these pairs; product: sensitivities of the value to X, (point, sublattice, combo, pair);
-        in_full: the same times late and early times, asked for where different levels count as one."""
+        in_full: the same times late and early times, asked for at points where different levels count as one."""
         if self.turn is None:
             return
+        everything = slice(None)
         g = self._pull(channel, at, product)
-        self.turn += self._left(channel, g)
-        self.turn[..., : self.kept, :] -= self._right(channel, g)
+        self.turn += self._left(channel, g, everything)
+        self.turn[..., : self.kept, :] -= self._right(channel, g, everything)
         if self.inside is None:
             self.together = self._close()
-            self.inside = np.zeros_like(self.turn)
-        if self.together.any():
-            late, early = in_full()
-            self.inside -= 0.5 * self._left(channel, self._pull(channel, at, late))
-            self.inside[..., : self.kept, :] -= 0.5 * self._right(channel, self._pull(channel, at, early))
+            self.some = np.flatnonzero(self.together.any((1, 2, 3)))
+            self.inside = np.zeros((self.some.size, *self.turn.shape[1:]))
+        if self.some.size:
+            late, early = in_full(self.some)
+            here = at if at.ndim < late.ndim else at[self.some]
+            self.inside -= 0.5 * self._left(channel, self._pull(channel, here, late), self.some)
+            right = self._right(channel, self._pull(channel, here, early), self.some)
+            self.inside[..., : self.kept, :] -= 0.5 * right
 
     def _pull(self, channel: _Channel, at: Floats, sensitivity: Floats) -> Floats:
         """Derivative in each O of the channel, (point, sublattice, operator, kept, level)."""
@@ -339,15 +344,15 @@ class _Slope:
         out[..., channel.rows, channel.columns] = g
         return out
 
-    def _left(self, channel: _Channel, g: Floats) -> Floats:  # sum_A O_A^T G_A
+    def _left(self, channel: _Channel, g: Floats, points: Index) -> Floats:  # sum_A O_A^T G_A
         d = self.shape[-1]
-        tall = self.ops[..., channel.operators, : self.kept, :]
+        tall = self.ops[points][..., channel.operators, : self.kept, :]
         return np.swapaxes(tall.reshape(*tall.shape[:-3], -1, d), -1, -2) @ g.reshape(*g.shape[:-3], -1, d)
 
-    def _right(self, channel: _Channel, g: Floats) -> Floats:  # sum_A G_A O_A^T
+    def _right(self, channel: _Channel, g: Floats, points: Index) -> Floats:  # sum_A G_A O_A^T
         d = self.shape[-1]
         wide = np.swapaxes(g, -3, -2).reshape(*g.shape[:-3], self.kept, -1)
-        tall = np.swapaxes(self.ops[..., channel.operators, :, :], -1, -2)
+        tall = np.swapaxes(self.ops[points][..., channel.operators, :, :], -1, -2)
         return wide @ tall.reshape(*tall.shape[:-3], -1, d)
 
     def matrix(self) -> Floats:
@@ -359,8 +364,8 @@ class _Slope:
             gap = self.energy[..., None, :] - self.energy[..., :, None]
             apart = gap != 0
             out = 0.5 * (self.turn - np.swapaxes(self.turn, -1, -2)) / np.where(apart, gap, np.inf)
-            if self.together.any():
+            if self.some.size:
                 inside = 0.5 * (self.inside + np.swapaxes(self.inside, -1, -2))
-                out = np.where(self.together, inside, out)
+                out[self.some] = np.where(self.together[self.some], inside, out[self.some])
         out[..., states, states] = self.diagonal
         return out
