@@ -195,8 +195,13 @@ class _Points:
             todo, first = todo[~settled], first[~settled]
             if not todo.size:
                 break
-            found = families.onset(evaluate.pick(self.sites, todo), fields[first, todo], np.ones(todo.size), plan=plan)
             normal = first == Family.NORMAL
+            x = fields[first, todo].copy()
+            # The single-particle family branches off where no density field is on. In an insulator such a field costs
+            # nothing, so its size is no more than noise, but it would move this branching point.
+            uniform = x[normal][..., -self.species :].mean(1, keepdims=True)
+            x[np.flatnonzero(normal), :, -self.species :] -= uniform
+            found = families.onset(evaluate.pick(self.sites, todo), x, np.ones(todo.size), plan=plan)
             ok = (found.dressed > 0) & (~normal | (found.product > 0) | collapsed[todo])
             row[todo[ok]], soft[todo[ok]] = first[ok], found.dressed[ok]
             energies[todo[~ok], first[~ok]] = np.inf
@@ -251,8 +256,9 @@ class _Points:
         index = np.flatnonzero(possible & (self.slow_T > 0))
         best = self._nothing()
         if family is Family.NORMAL:
-            # Without hopping and temperature no field moves anything.
-            best = self._at_own_temperature(family, best._replace(ok=self.slow_T == 0))
+            # Without fields: the plain expansion, which is always there. Density fields lower it by little, and where
+            # one is flat (in an insulator) its minimum may not be found.
+            best = self._at_own_temperature(family, best._replace(ok=np.ones(self.size, bool)))
         for names in families.variants(family, self.species, self.sublattices):
             for tilt in (0.0,) if self.sublattices == 1 else (0.0, 0.5):
                 start = np.zeros((self.size, self.sublattices, len(names)))
