@@ -328,7 +328,7 @@ def _thermal(energy: FloatArray, J: FloatArray, T: float, space: LocalSpace) -> 
     """Averages of every site's Gibbs state at fields J (species, site); energy (state, site)."""
     field, number = np.asarray(space.field), np.asarray(space.number)
     sites = energy.shape[1]
-    found = {name: np.zeros((space.species, sites)) for name in ("phi", "filling")}
+    found: dict[str, FloatArray] = {name: np.zeros((space.species, sites)) for name in ("phi", "filling")}
     found |= {name: np.zeros(sites) for name in ("free_energy", "entropy", "pair", "antipair")}
     diagonal = np.arange(space.size)
     for begin in range(0, sites, _CHUNK):

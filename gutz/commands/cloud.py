@@ -145,7 +145,7 @@ def _print_one(plan: Plan, asked: CloudPoint, cloud: Cloud, margin: Margin | Non
             far = [number(float(layer.outer[0]) * micro, 3)] if np.isfinite(micro) else []
             lines.append(
                 [
-                    WORDS[layer.phase], number(float(layer.inner[0]), 3), number(float(layer.outer[0]), 3), *far,
+                    layer.words, number(float(layer.inner[0]), 3), number(float(layer.outer[0]), 3), *far,
                     *(number(float(n), 4) for n in layer.atoms), f"{layer.atoms.sum() / total:.1%}",
                     number(layer.entropy / total, 3),
                 ]
@@ -226,8 +226,8 @@ def _record(
                 "remarks": [SENTENCES[bit] for bit in Status if bit and cloud.status & bit],
                 "shells": [
                     {
-                        "phase": WORDS[layer.phase], "inner": layer.inner, "outer": layer.outer, "atoms": layer.atoms,
-                        "entropy": layer.entropy,
+                        "phase": WORDS[layer.phase], "atoms_per_site": layer.whole, "inner": layer.inner,
+                        "outer": layer.outer, "atoms": layer.atoms, "entropy": layer.entropy,
                     }
                     for layer in profiles.shells(cloud)
                 ],

@@ -75,7 +75,9 @@ def climb(
         frozen = free[-1] and best.y[-1] <= 1.001 * lowest_T and miss[-1] < -bearable[-1]
         if frozen or region < _SMALLEST_REGION * scale:
             break
-        step = _trust_step(best.response + secant, miss, region, free, float(goal.max()) / scale)
+        # On a ridge each side alone may lack a species: only together do they know both directions.
+        response = np.asarray(sum(x * s.response for x, s in zip(shares, sides, strict=True)))
+        step = _trust_step(response + secant, miss, region, free, float(goal.max()) / scale)
         new = best.y + step
         if free[-1]:
             new[-1] = max(new[-1], 0.25 * best.y[-1], lowest_T)

@@ -43,7 +43,7 @@ _COEXIST = 1e-2
 """Difference of atom numbers (relative) between the two sides of a jump above which they are two phases: less is one
 node crossing the border of a shell."""
 
-_ROUNDS = 12
+_ROUNDS = 16
 
 _MOST_REPEATS = 8
 _MODES_MET = 4e-3
@@ -130,6 +130,7 @@ class _Problem:
     goal: FloatArray
     free: NDArray[np.bool_]
     tolerance: float
+    scale: float
     law: PhononLaw | None = None
 
     @property
@@ -154,7 +155,7 @@ class _Problem:
             found = total(nodes, at, self.gas(at[:-1] - nodes.potential, float(at[-1])))
             return found if self.law is None else self.law.added(found)
 
-        scale = self.gas.scale
+        scale = self.scale
         return climb(sums, y, self.goal, self.free, accuracy * self.size(), bearable, scale, COLDEST * scale)
 
 
@@ -187,10 +188,12 @@ def solve_cloud(
         T, entropy = 0.0, None
     goal = np.append(atoms, 0.0 if entropy is None else entropy * atoms.sum())
     free = np.append(np.ones(gas.species, bool), entropy is not None)
-    problem = _Problem(gas, mesh_of(gas, trap), goal, free, tolerance or TOLERANCE[gas.ansatz])
-    y = first_guess(gas, trap, atoms, T) if guess is None else np.array(guess, float)
+    y = first_guess(gas, trap, atoms, T, entropy) if guess is None else np.array(guess, float)
     if T is not None:
         y[-1] = T
+    # Hard cores that hardly hop have no energy of their own but how deep they fill the trap.
+    scale = max(gas.scale, float(np.abs(y).max())) if gas.n_max == 1 else gas.scale
+    problem = _Problem(gas, mesh_of(gas, trap), goal, free, tolerance or TOLERANCE[gas.ansatz], scale)
     reused = None
     if near is not None and (near.nodes.line is None) == (trap.ratio is None or trap.size is not None):
         reused = problem.mesh.again(near.nodes, np.append(near.mu, near.T), y)
@@ -204,7 +207,7 @@ def solve_cloud(
         nodes, climbed, error = _solve(problem, y, reused)
         best = climbed.sides[0]
         reused, y = None, best.y
-        if problem.free[-1] and not climbed.met and y[-1] <= 1.01 * COLDEST * gas.scale:
+        if problem.free[-1] and not climbed.met and y[-1] <= 1.01 * COLDEST * scale:
             frozen = True
             problem = replace(problem, free=np.append(np.ones(gas.species, bool), False), law=None)
             nodes, climbed, error = _solve(problem, y)
@@ -226,16 +229,25 @@ def solve_cloud(
     return _finish(problem, trap, nodes, climbed, error, heavy, frozen, modes)
 
 
-def first_guess(gas: LocalGas, trap: Trap, atoms: FloatArray, T: float | None) -> FloatArray:
-    """Thomas-Fermi chemical potentials without hopping, or those of a cloud with one atom per site if higher."""
+def first_guess(
+    gas: LocalGas, trap: Trap, atoms: FloatArray, T: float | None, entropy: float | None = None
+) -> FloatArray:
+    """Thomas-Fermi chemical potentials without hopping, or those of a cloud with one atom per site if higher.
+
+    A hot gas starts as a classical one: N = (pi T / c)^(d/2) e^(mu/T), S/N = d/2 + 1 - mu/T.
+    """
     total = float(atoms.sum())
     U = np.maximum(np.asarray(gas.mixture.U)[0], 1e-3 * gas.scale)
     U12 = float(gas.mixture.U12[0]) if gas.species == 2 else 0.0
-    start_T = 0.1 * gas.scale if T is None else T
     if trap.size is not None:
         n = atoms / np.prod(trap.size)
-        return np.append(U * (n - 0.5) + U12 * (n.sum() - n), start_T)
+        return np.append(U * (n - 0.5) + U12 * (n.sum() - n), 0.1 * gas.scale if T is None else T)
     order = trap.axes / 2
+    if entropy is not None and entropy > order + 1.0:
+        hot = order + 1.0 - entropy
+        mean = float(np.prod(trap.curvature[0])) ** (1 / trap.axes)
+        T = mean / np.pi * float(atoms.max() * np.exp(-hot)) ** (1 / order)
+        return np.append(np.full(gas.species, hot * T) - gas.z_t, T)
     mu = []
     for a in range(gas.species):
         one = float(trap.sites_below(1.0, a))
@@ -244,7 +256,7 @@ def first_guess(gas: LocalGas, trap: Trap, atoms: FloatArray, T: float | None) -
         hard = gas.n_max == 1
         fermi = 0.0 if hard else (max(shared, 0.0) * (order + 1) / one) ** (1 / (order + 1))
         mu.append(max(fermi, (total / one) ** (1 / order)) - 0.5 * gas.z_t[a])
-    return np.append(mu, start_T)
+    return np.append(mu, 0.1 * max(gas.scale, *np.abs(mu)) if T is None else T)
 
 
 def _checked_atoms(gas: LocalGas, trap: Trap, atoms: FloatArray) -> FloatArray:
@@ -274,9 +286,12 @@ def _solve(problem: _Problem, y: FloatArray, reused: Nodes | None = None) -> tup
         nodes = mesh.coarse(y)
         for _ in range(_ROUNDS):
             climbed = problem.climb(nodes, y, _ROUGH)
-            y = climbed.sides[0].y
+            before, y = y, climbed.sides[0].y.copy()
             if not mesh.overflows(nodes, climbed.sides[0].states):
                 break
+            # Nodes that end too early leave no room for the entropy, which drives T up without bound.
+            if before[-1] > 0:
+                y[-1] = min(y[-1], 2.0 * before[-1])
             nodes = mesh.coarse(y)
         nodes = mesh.fine(y, problem.tolerance * problem.size(climbed.sides[0].totals[-1]))
     else:

@@ -26,13 +26,22 @@ AXES = ("x", "y", "z")
 
 @dataclass(frozen=True)
 class Shell:
-    """A layer of one phase. inner, outer: radii in sites along each axis; atoms: (species,); entropy in k_B."""
+    """A layer of one phase. inner, outer: radii in sites along each axis; atoms: (species,); entropy in k_B.
+
+    whole: atoms per site of a Mott insulator, 0 for other phases.
+    """
 
     phase: Phase
+    whole: int
     inner: FloatArray
     outer: FloatArray
     atoms: FloatArray
     entropy: float
+
+    @property
+    def words(self) -> str:
+        """The phase in words, a Mott insulator with its filling."""
+        return WORDS[self.phase] + (f", {self.whole} per site" if self.whole else "")
 
 
 def at_potential(cloud: Cloud, potential: FloatArray, names: Sequence[str] = LOCAL) -> dict[str, NDArray[Any]]:
@@ -103,7 +112,10 @@ def shells(cloud: Cloud) -> list[Shell]:
         return []
     codes, v, w = cloud.phases(), cloud.nodes.line, cloud.nodes.weight
     atoms, entropy = w[:, None] * cloud.average("filling"), w * cloud.average("entropy")
-    starts = np.flatnonzero(np.diff(codes, prepend=codes[0] - 1))
+    # Mott insulators of different filling are different shells.
+    whole = np.where(codes == int(Phase.MOTT), np.rint(cloud.average("filling").sum(-1)), 0).astype(int)
+    kinds = codes.astype(int) + 100 * whole
+    starts = np.flatnonzero(np.diff(kinds, prepend=kinds[0] - 1))
     ends = np.append(starts[1:], codes.size)
     found = []
     for begin, end in zip(starts, ends, strict=True):
@@ -114,6 +126,7 @@ def shells(cloud: Cloud) -> list[Shell]:
         found.append(
             Shell(
                 Phase(int(codes[begin])),
+                int(whole[begin]),
                 _radii(cloud, low),
                 _radii(cloud, high),
                 atoms[begin:end].sum(0),
