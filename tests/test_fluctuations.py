@@ -166,12 +166,12 @@ def test_uncoupled_directions_do_not_matter():
 
 def test_a_vanishing_superlattice_changes_nothing():
     k = grid(4, 4)
-    uniform, split = (one_species(U=30.0, mu=11.0, T=0.0, dim=2, offset=offset)[0] for offset in (0.0, 1e-7))
+    uniform, split = (one_species(U=30.0, mu=11.0, T=0.0, dim=2, offset=offset)[0] for offset in (0.0, 1e-4))
     assert split.sublattices == 2
     a, b = (GaussianLayer(s) for s in (uniform, split))
-    assert b.correlations(k).normal == pytest.approx(a.correlations(k).normal, rel=1e-5)
-    assert b.one_loop(k)[0] == pytest.approx(a.one_loop(k)[0], rel=1e-5)
-    assert np.abs(b.correlations(k).staggered).max() < 1e-5
+    assert b.correlations(k).normal == pytest.approx(a.correlations(k).normal, rel=1e-4)
+    assert b.one_loop(k)[0] == pytest.approx(a.one_loop(k)[0], rel=1e-4)
+    assert np.abs(b.correlations(k).staggered).max() < 1e-4
 
 
 def test_a_superlattice_shows_in_the_staggered_part():

@@ -28,6 +28,9 @@ from gutz.solver import solve
 
 Floats = NDArray[np.float64]
 
+ALIKE = 1e-9
+"""Relative difference of two sublattices below which there is one."""
+
 _KICK = 1e-4
 
 
@@ -115,7 +118,7 @@ def _dressed(index: NDArray[np.int64], mixture: Mixture, x: Floats) -> list[Loca
     """Find the trial fields again: a solution keeps the order parameters only."""
     sublattices, n_max = x.shape[-2], _cutoff(mixture)
     mu, T = np.asarray(mixture.mu), np.asarray(mixture.T)
-    state = selection.minimise(mixture, mu, T, n_max, sublattices, np.asarray(solve(mixture).fields))
+    state = selection.minimise(mixture, mu, T, n_max, sublattices, np.broadcast_to(solve(mixture).fields, x.shape))
     names = dressed.NAMES[mixture.species]
     f = bond.frame(n_max, mixture.species, "full")
     p = dressed.sites(mixture, jnp.asarray(mu), jnp.asarray(T), n_max, sublattices)
@@ -173,9 +176,11 @@ def _sites(
     out = []
     for n, position in enumerate(index.tolist()):
         t = np.asarray(mixture.t)[n]
-        hopping = _hopping(t, J[n], phi[n], ordered[n], curvature[n], lower[n], kernel[n])
-        arrays = (energy[n], weight[n], lower[n], kernel[n], rho[n], phi[n])
-        out.append(LocalSites(position, float(T[n]), *arrays, hopping, ordered[n], space))
+        # Sublattices that came out alike are one.
+        kept = slice(1) if np.abs(h[n] - h[n, :1]).max() <= ALIKE * np.abs(h[n]).max() else slice(None)
+        E, P, b, K, state, order = (v[n, kept] for v in (energy, weight, lower, kernel, rho, phi))
+        hopping = _hopping(t, J[n, kept], order, ordered[n], curvature[n], b, K)
+        out.append(LocalSites(position, float(T[n]), E, P, b, K, state, order, hopping, ordered[n], space))
     return out
 
 

@@ -6,6 +6,7 @@ from gutz.noise.maps import cloud_map, maps, noise_map
 from gutz.noise.moments import LocalMoments, local_moments
 from gutz.noise.product import ProductMap
 from gutz.noise.recipes import Validity
+from gutz.noise.series import noise_series
 
 __all__ = [
     "Feature",
@@ -19,5 +20,6 @@ __all__ = [
     "local_moments",
     "maps",
     "noise_map",
+    "noise_series",
     "order_of",
 ]

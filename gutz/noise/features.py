@@ -11,10 +11,13 @@ import numpy as np
 from gutz.noise.grid import Floats
 from gutz.noise.shapes import CHANNELS, Decay, decay, line_shape, width
 from gutz.noise.uniform import BlendedMap
-from gutz.phases import STAGGER_THRESHOLD
+from gutz.phases import EMPTY_THRESHOLD, PAIR_THRESHOLD, STAGGER_THRESHOLD
 from gutz.solution import Solution
 
 _SAMPLE = 4096
+
+CONDENSED = 1e-5
+"""Condensate density above which there is single-particle order."""
 
 FAINT = 1e-3
 """Heights below this, relative to the squared fillings, are not listed."""
@@ -25,7 +28,8 @@ class Feature(NamedTuple):
 
     species: (a, b), counted from 1. where: "k' = k", "k' = -k", "k' = 0", "k' = k + (π, ..)" or "k = 0". height: mean
     over k of C_ab on the feature above its surroundings; normalised: the same over n_a n_b. width: full width at half
-    maximum along x, in 1/lattice constant. weight: height summed over the momenta of the feature. meaning: a sentence.
+    maximum along x, in 1/lattice constant. weight: height summed over the momenta of the feature (order peaks: of
+    its top, not of the wings that fluctuations give it). meaning: a sentence.
     order: this feature proves order by itself.
     """
 
@@ -53,6 +57,15 @@ class Order(NamedTuple):
     antipair: float
     decays: dict[str, Decay]
 
+    @property
+    def paired_channel(self) -> str | None:
+        """Which order parameter there is besides <b_a>, if there is no <b_a>: "pair", "antipair" or None."""
+        if np.any(self.condensate > CONDENSED):
+            return None
+        if abs(self.pair) > PAIR_THRESHOLD:
+            return "pair"
+        return "antipair" if abs(self.antipair) > PAIR_THRESHOLD else None
+
 
 def features(made: BlendedMap, order: Order) -> list[Feature]:
     """List the features of a map."""
@@ -62,13 +75,13 @@ def features(made: BlendedMap, order: Order) -> list[Feature]:
     own_inverse = grid.flat(2 * k) == 0
     away = ~own_inverse
     filling = made.mean.sum(-1) / grid.sites
-    condensed = order.condensate > 1e-5
+    condensed = order.condensate > CONDENSED
 
     def add(
         name: str, a: int, b: int, where: str, height: float, decay: Decay | None, meaning: str, proves: bool = False
     ) -> None:
-        scale = max(float(filling[a] * filling[b]), 1e-300)
-        if abs(height) < FAINT * scale:
+        scale = float(filling[a] * filling[b])
+        if scale < EMPTY_THRESHOLD**2 or abs(height) < FAINT * scale:
             return
         found.append(
             Feature(
@@ -95,16 +108,18 @@ def features(made: BlendedMap, order: Order) -> list[Feature]:
         wave = _staggered(made, a, away) if abs(order.staggering[a]) > STAGGER_THRESHOLD else 0.0
         add("density-wave peak", a, a, "k' = k + (π, ..)", wave, None, _WAVE, True)
     if made.species == 2:
-        plain = not condensed.any()
         pair = _height(made, 0, 1, -1, away)
         anti = _height(made, 0, 1, 1, away)
-        for name, height, sign, present, channel in (
-            ("pairing between species", pair, "k' = -k", abs(order.pair) > 1e-3, "pair"),
-            ("counterflow peak", anti, "k' = k", abs(order.antipair) > 1e-3, "antipair"),
+        for name, height, where, channel in (
+            ("pairing between species", pair, "k' = -k", "pair"),
+            ("counterflow peak", anti, "k' = k", "antipair"),
         ):
-            proves = plain and present
+            proves = channel == order.paired_channel
             words = _PROOF[channel] if proves else _NO_PROOF[channel]
-            add(name, 0, 1, sign, height, order.decays.get(channel), words, proves)
+            fall = order.decays[channel] if proves else None
+            # Mean field gives the weight; what the top keeps of it depends on how far the order reaches.
+            top = 1.0 if fall is None else _top(grid.shape, fall)
+            add(name, 0, 1, where, height * top, fall, words, proves)
     return found
 
 
@@ -166,6 +181,11 @@ def _staggered(made: BlendedMap, a: int, away: np.ndarray) -> float:
     k = k[:: max(1, len(k) // _SAMPLE)]
     near = [made.entries(a, a, k, k + half + step).mean() for step in _neighbours(shape)]
     return float(on - np.median(near))
+
+
+def _top(shape: tuple[int, ...], decay: Decay) -> float:
+    """Height of an order peak relative to long-range order, for a box of this shape."""
+    return float(line_shape(decay, np.ones(shape), refine=1)[1].max())
 
 
 def _width(shape: tuple[int, ...], decay: Decay | None) -> float:

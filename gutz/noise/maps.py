@@ -9,14 +9,17 @@ from typing import Any
 
 import numpy as np
 import xarray as xr
+from numpy.typing import NDArray
 
 from gutz.errors import InputError
 from gutz.fluctuations import LocalSites, local_sites
 from gutz.noise import recipes
+from gutz.noise.features import order_of
 from gutz.noise.grid import Floats, Grid, check_grid, refuse_above
 from gutz.noise.moments import LocalMoments, of_sites
 from gutz.noise.product import ProductMap
 from gutz.noise.recipes import Validity
+from gutz.noise.shapes import Reach, line_shape
 from gutz.noise.uniform import BlendedMap
 from gutz.solution import Solution
 from gutz.solver import solve
@@ -41,7 +44,8 @@ def maps(solution: Solution, size: int | Sequence[int] = 32) -> list[tuple[Blend
     sites = local_sites(solution)
     companions: list[LocalSites | None] = [None] * len(sites)
     if solution.ansatz == "dressed":
-        companions = _companions(solution, filling)
+        wanted = np.array([own is not None and not recipes.is_paired(own) for own in sites], bool)
+        companions = _companions(solution, filling, wanted)
     exchange = _exchange(solution)
     out: list[tuple[BlendedMap, Validity] | None] = []
     for n, (own, other) in enumerate(zip(sites, companions, strict=True)):
@@ -61,10 +65,10 @@ def _flat(solution: Solution, name: str) -> Floats:
     return value.reshape((-1, *value.shape[len(solution.shape) :]))
 
 
-def _companions(solution: Solution, filling: Floats) -> list[LocalSites | None]:
-    """Product states at the fillings and temperatures found; empty points get a filling just to have one."""
+def _companions(solution: Solution, filling: Floats, wanted: NDArray[np.bool_]) -> list[LocalSites | None]:
+    """Product states at the fillings and temperatures found, where they are wanted and there are atoms."""
     mixture = solution.mixture.flat().map(np.asarray)
-    usable = np.isfinite(filling).all(-1) & (filling > 1e-9).all(-1)
+    usable = wanted & np.isfinite(filling).all(-1) & (filling > 1e-9).all(-1)
     if mixture.n_max is not None:
         usable &= (filling < mixture.n_max).all(-1)
     found: list[LocalSites | None] = [None] * len(filling)
@@ -115,10 +119,13 @@ def noise_map(
     (on the grid, in 1/lattice constant) at which C_ab(k, k') is given for all k. dims, coords: as in
     `Solution.to_dataset`.
 
-    Variables: momentum_distribution n_a(k); difference_line C_ab(k, k) and sum_line C_ab(k, -k); difference_correlation
-    and sum_correlation, averages over k of C_ab(k, k + Q) and C_ab(k, -k + Q) for Q along x, what an averaging
-    experiment sees; noise, planes where asked; validity; phase, filling, condensate, T. Shot noise δ_ab n_a(k) at
-    k = k' is not included: it exists at the same pixel only. Raises InputError, or ResourceError for what does not fit.
+    Variables: momentum_distribution n_a(k); difference_line C_ab(k, k) and sum_line C_ab(k, -k);
+    difference_correlation and sum_correlation, averages over k of C_ab(k, k + Q) and C_ab(k, -k + Q) for Q along x,
+    what an averaging experiment sees (order peaks between the species with the height and width that fluctuations
+    leave them in this dimension); noise, planes where asked; validity; phase, filling, condensate, T.
+
+    Lines, planes and whole maps hold order peaks as sharp lines. Shot noise δ_ab n_a(k) at k = k' is not included: it
+    exists at the same pixel only. Raises InputError, or ResourceError for what does not fit.
     """
     grid = check_grid(size, solution.mixture.dim)
     if full is None:
@@ -147,7 +154,10 @@ def noise_map(
         if found is None:
             continue
         made, validity[n] = found
-        _fill({name: values[n] for name, values in data.items()}, made, grid, grid.flat(along), at)
+        row = {name: values[n] for name, values in data.items()}
+        _fill(row, made, grid, grid.flat(along), at)
+        if species == 2:
+            _spread(row, solution, np.unravel_index(n, solution.shape) if solution.shape else (), grid)
     return _labelled(solution, grid, data, validity, planes, dims, coords)
 
 
@@ -164,6 +174,21 @@ def _fill(out: dict[str, Floats], made: BlendedMap, grid: Grid, along: np.ndarra
                 out["noise"][a, b] = made.full(a, b)
             for row, k_ in enumerate(at):
                 out["planes"][a, b, row] = made.plane(a, b, k_).ravel()
+
+
+def _spread(out: dict[str, Floats], solution: Solution, point: tuple[Any, ...], grid: Grid) -> None:
+    """Give the order peaks of the averages the shape that their decay of correlations asks for."""
+    order = order_of(solution, point)
+    channel = order.paired_channel
+    if channel is None or order.decays[channel].reach is Reach.LONG:
+        return
+    name = {"pair": "sum_correlation", "antipair": "difference_correlation"}[channel]
+    _, shape = line_shape(order.decays[channel], np.ones(grid.shape), refine=1)
+    shape = np.roll(shape, -(grid.shape[0] // 2))
+    for a, b in ((0, 1), (1, 0)):
+        line = out[name][a, b]
+        background = line[1:].mean()
+        out[name][a, b] = np.where(np.arange(line.size) == 0, background, line) + (line[0] - background) * shape
 
 
 _WORDS = {

@@ -3,10 +3,8 @@
 In:  a dataset of `gutz.noise.noise_map` at one point (no batch axes).
 Out: a matplotlib `Figure`: maps 11, 22, 12 and n(k) in 1D; averages over k against Q, lines and n(k) otherwise.
 
-Colours run from brown (fewer coincidences than chance) over white (none) to blue (more), the same for all maps.
+Colours run from brown (fewer coincidences than chance) over white (as many) to blue (more).
 """
-
-from typing import Any
 
 import numpy as np
 import xarray as xr
@@ -41,23 +39,21 @@ def _draw_maps(dataset: xr.Dataset, title: str, log: bool) -> Figure:
     figure = canvas.new_figure(columns, 1 if len(pairs) == 1 else 2, width=8.6)
     axes = figure.subplots(1 if len(pairs) == 1 else 2, columns, squeeze=False).ravel()
     density = dataset["momentum_distribution"].mean("k").values
-    values = []
-    for a, b in pairs:
-        # In units of the mean densities, so that 1 is full contrast in every panel.
-        values.append(_centred(dataset["noise"].values[a, b] / (density[a] * density[b]), (0, 1)))
-    norm = _norm(values, log)
     k = _first_zone(dataset["k"].values)
     edges = np.concatenate([k, [k[-1] + k[1] - k[0]]]) - 0.5 * (k[1] - k[0])
-    mesh: Any = None
-    for panel, (a, b), value in zip(axes, pairs, values, strict=False):
+    for panel, (a, b) in zip(axes, pairs, strict=False):
+        # In units of the mean densities, so that 1 is full contrast; each map has its own scale, always white at zero.
+        value = _centred(dataset["noise"].values[a, b] / (density[a] * density[b]), (0, 1))
+        norm = _norm(value, log)
         mesh = panel.pcolormesh(edges, edges, value.T, cmap=style.BALANCE, norm=norm, rasterized=True)
+        bar = figure.colorbar(mesh, ax=panel, shrink=0.85, aspect=25, pad=0.02)
+        bar.outline.set_visible(False)
         panel.set_aspect("equal")
+        _name_lines(panel, k, value)
         panel.set_title(f"C{a + 1}{b + 1}(k, k′) / n{a + 1} n{b + 1}", loc="left")
         panel.set_xlabel("k (1/a)")
         panel.set_ylabel("k′ (1/a)")
         _momentum_ticks(panel, both=True)
-    bar = figure.colorbar(mesh, ax=list(axes[: len(pairs)]), shrink=0.8, aspect=30)
-    bar.outline.set_visible(False)
     _draw_distribution(axes[len(pairs)], dataset, k, log)
     _finish(figure, dataset, title)
     return figure
@@ -86,7 +82,7 @@ def _draw_lines(dataset: xr.Dataset, title: str, log: bool) -> Figure:
             values = _centred(values, (0,))
             # k = 0 is the condensate's, and drowns the rest; where k = -k both channels meet.
             values[[0, len(k) // 2] if len(k) % 2 == 0 else [len(k) // 2]] = np.nan
-            axes[2].plot(k, values, dashes, color=style.LINE_COLOURS[number], lw=1.3)
+            axes[2].plot(k, values, dashes, color=style.LINE_COLOURS[number], lw=2.6 - 0.8 * number)
             if number == len(pairs) - 1:
                 _label_end(axes[2], k, values, f"k′ = {sign}k", style.INK)
     axes[2].set_title("C(k, ±k) along x", loc="left")
@@ -109,10 +105,10 @@ def _draw_pairs(panel: Axes, x: Floats, lines: dict[tuple[int, int], Floats], lo
     middle = len(x) // 2
     for number, ((a, b), values) in enumerate(lines.items()):
         colour = style.LINE_COLOURS[number]
-        panel.plot(x, values, color=colour, lw=1.3)
+        panel.plot(x, values, color=colour, lw=2.6 - 0.8 * number)
         panel.annotate(
-            f"{a + 1}{b + 1}", (x[middle], values[middle]), xytext=(6 + 14 * number, -2), color=colour,
-            textcoords="offset points", size=style.SMALL_SIZE + 1, va="top",
+            f"{a + 1}{b + 1}", (x[middle], values[middle]), xytext=(8 + 16 * number, 2), color=colour,
+            textcoords="offset points", size=style.SMALL_SIZE + 1, va="bottom",
         )  # fmt: skip
     panel.axhline(0.0, color=style.PALE_INK, lw=0.6)
     _momentum_ticks(panel, both=False)
@@ -143,11 +139,33 @@ def _label_end(panel: Axes, x: Floats, y: Floats, words: str, colour: str, lift:
         )  # fmt: skip
 
 
-def _norm(values: list[Floats], log: bool) -> Normalize:
-    """One scale for all maps, white at zero; single entries (the condensate) do not set it."""
-    flat = np.abs(np.concatenate([v.ravel() for v in values]))
-    shape = values[0].shape
-    largest = float(np.sort(flat)[-max(1, min(shape) // 2)])
+def _name_lines(panel: Axes, k: Floats, value: Floats) -> None:
+    """Write the condition of each line that stands out beside it, at a quarter of the zone."""
+    length = len(k)
+    index = np.arange(length)
+    at = length // 2 + max(1, length // 5)
+    typical = float(np.median(np.abs(value)))
+    strong = max(10.0 * typical, 0.02 * float(np.sort(np.abs(value).ravel())[-length]))
+    for words, entries, corner in (
+        ("k′ = k", value[index, index], (k[at], k[at])),
+        ("k′ = −k", value[index, _negative(length)], (k[at], -k[at])),
+    ):
+        if np.median(np.abs(entries)) > strong:
+            panel.annotate(
+                words, corner, xytext=(-6 if corner[1] > 0 else 6, 4), textcoords="offset points",
+                ha="right" if corner[1] > 0 else "left", va="bottom", size=style.SMALL_SIZE, color=style.INK,
+            )  # fmt: skip
+
+
+def _negative(length: int) -> NDArray[np.int64]:
+    """Position of -k in a grid from -π to π."""
+    return (2 * (length // 2) - np.arange(length)) % length
+
+
+def _norm(value: Floats, log: bool) -> Normalize:
+    """White at zero; single entries (the condensate) do not set the scale."""
+    flat = np.abs(value).ravel()
+    largest = float(np.sort(flat)[-max(1, min(value.shape) // 2)])
     largest = largest if largest > 0 else 1.0
     if log:
         return SymLogNorm(linthresh=_LINEAR_SHARE * largest, vmin=-largest, vmax=largest)

@@ -84,6 +84,19 @@ def test_features_tell_counterflow_from_superfluid(phases):
     assert "vanishing condensate" in between.meaning
 
 
+def test_order_peaks_are_lower_in_fewer_dimensions():
+    """No long-range order at T > 0 in 1D (Mermin, Wagner, PRL 17, 1133 (1966)): the peak loses height to its width."""
+    solution = two(t=0.02, U12=0.5, mu=0.25, T=np.array([1e-4, 2e-3]), dim=1)
+    cold, warm = (named(features(found[0], order_of(solution, (n,)))) for n, found in enumerate(maps(solution, 64)))
+    peak = cold["counterflow peak", (1, 2)]
+    assert peak.normalised < 0.9
+    assert peak.width > 4 * 1.3916 / 64
+    absent = ("counterflow peak", (1, 2)) not in warm
+    assert absent or warm["counterflow peak", (1, 2)].height < peak.height
+    line = gutz.noise_map(solution, 64)["difference_correlation"].values[0, 0, 1]
+    assert line[0] > line[1] > line[2] > line[8]
+
+
 def test_paired_state_has_its_peak_at_opposite_momenta():
     U12, t = -0.5, 0.01
     solution = two(t=t, U12=U12, mu=0.5 * U12 - 3 * t * t / abs(U12) * np.array([1.0, 4.0]), T=1e-4)
