@@ -5,6 +5,7 @@ Out: a table along temperature (or along one axis of the camera) or JSON; with -
      --shots-out synthetic pictures; with --improve better settings and sensitivities.
 """
 
+import dataclasses
 from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
@@ -15,6 +16,7 @@ import xarray as xr
 from gutz import console, plots
 from gutz.commands.points import load, values
 from gutz.errors import InputError, OutputError
+from gutz.imaging import design
 from gutz.imaging import detect as detecting
 from gutz.imaging import shots as synthetic
 from gutz.imaging.detect import Limit
@@ -44,6 +46,8 @@ def run(
     source, plan = load(file, overrides, clouds=True)
     made = detection.section(plan)
     chosen, free = _axes(plan, values(at))
+    if improve is not None:
+        return _improve(plan, chosen, improve, as_json)
     folder = _folder(out, force) if out else None
     critical = {channel: _critical(plan, chosen, channel) for channel in CHANNELS}
     T = _temperatures(plan, values(at), critical)
@@ -293,6 +297,71 @@ def _record(dataset: xr.Dataset) -> dict[str, Any]:
         **{str(name): dataset[name].values.tolist() for name in dataset.coords},
         **{str(name): {"dims": list(dataset[name].dims), "values": dataset[name].values} for name in dataset.data_vars},
     }
+
+
+def _improve(plan: Plan, chosen: dict[str, float], text: str, as_json: bool) -> int:
+    """Move knobs, print what became of them, what holds them, and what calibration errors do."""
+    knobs, extended = detection.knobs(plan, text, chosen)
+    gas = [knob for knob in knobs if not knob.camera]
+    samples = detection.samples_of(extended, len(gas))
+    camera = detection.camera(plan, chosen)
+    significance = float(detection.given(plan, "significance", chosen))
+    start = samples(np.array([[knob.start for knob in gas]]))[0]
+    totals = [float(start.regions[channel].total) for channel in CHANNELS]
+    channel = CHANNELS[int(np.argmax(totals))]
+    better = design.improve(knobs, samples, camera, channel, significance)
+    moved = camera.with_(**{k.camera: float(v) * k.si for k, v in zip(knobs, better.values, strict=True) if k.camera})
+    settled = detection.moved(extended, [v for k, v in zip(knobs, better.values, strict=True) if not k.camera])
+    draw, centre, errors = detection.calibrated(settled)
+    spread = design.spread(draw, centre, errors, moved, channel, significance) if errors.size else None
+    if as_json:
+        console.write_json(
+            {
+                "channel": channel, "shots_before": better.before, "shots_after": better.after,
+                "knobs": [
+                    {
+                        "name": k.name, "unit": k.unit, "low": k.low, "high": k.high, "start": k.start, "value": v,
+                        "bound": b,
+                    }
+                    for k, v, b in zip(knobs, better.values, better.bounds, strict=True)
+                ],
+                "sensitivities": [one._asdict() for one in better.sensitivities],
+                "calibration": None if spread is None else dataclasses.asdict(spread),
+            }
+        )  # fmt: skip
+    else:
+        _print_improved(better, channel, spread)
+    return 0
+
+
+def _print_improved(better: design.Improved, channel: str, spread: design.Spread | None) -> None:
+    number = console.number
+    rows = [
+        (
+            f"{k.name} ({k.unit})" if k.unit != "1" else k.name, number(k.start, 4), number(float(v), 4),
+            f"{k.low:g} to {k.high:g}", {"low": "at its lower bound", "high": "at its upper bound", "": ""}[b],
+        )
+        for k, v, b in zip(better.knobs, better.values, better.bounds, strict=True)
+    ]  # fmt: skip
+    console.table(("knob", "before", "after", "bounds", ""), rows)
+    name = {"pair": "pair peak", "antipair": "counterflow peak"}[channel]
+    console.say(f"{name} at {WHERE[channel]}: {_shots(better.before)} shots before, {_shots(better.after)} after")
+    held = [k.name for k, b in zip(better.knobs, better.bounds, strict=True) if b]
+    if held:
+        console.say(f"held back by the bounds of: {', '.join(held)}")
+    for one in better.sensitivities:
+        value = f"{number(one.value, 4)}{'' if one.unit == '1' else ' ' + one.unit}"
+        console.say(f"1 % more {one.name} (from {value}) changes the shots by {one.per_cent:+.2g} %")
+    if spread is not None:
+        low, middle, high = (_shots(x) for x in spread.shots)
+        console.say(
+            f"calibration errors (depth 2 %, scattering lengths 1 %, T 10 %, as far as they apply): order there with "
+            f"probability {spread.ordered:.2f}, shots {low} to {high} (16 to 84 %), median {middle}"
+        )
+
+
+def _shots(count: float) -> str:
+    return f"{np.ceil(count):.0f}" if np.isfinite(count) else "no number of"
 
 
 def _folder(out: str, force: bool) -> Path:

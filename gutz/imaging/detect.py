@@ -103,24 +103,26 @@ def words(name: str) -> str:
     return _WORDS[name]["long_name"]
 
 
-def of_solution(solution: Solution, layout: Layout) -> list[Sample]:
-    """A uniform sample of every point of a flat solution, order in planes reduced by its decay."""
+def of_solution(solution: Solution, layout: Layout | Sequence[Layout]) -> list[Sample]:
+    """A uniform sample of every point of a solution, in flat order. layout: one for all, or one each."""
     if solution.mixture.species != 2:
         raise InputError("detection of pairs and anti-pairs needs two species; the solution has one")
     dim = solution.mixture.dim
     if dim == 1:
         raise InputError("dim is 1; detection needs order across two directions of the picture: 2 or 3")
-    if (dim == 2) != (layout.planes > 0):
-        raise InputError(f"planes is {layout.planes}; it must be at least 1 for dim = 2, and 0 for dim = 3")
-    lead = len(solution.shape)
+    lead, size = len(solution.shape), int(np.prod(solution.shape, dtype=int))
+    layouts = [layout] * size if isinstance(layout, Layout) else list(layout)
+    for planes in {one.planes for one in layouts}:
+        if (dim == 2) != (planes > 0):
+            raise InputError(f"planes is {planes}; it must be at least 1 for dim = 2, and 0 for dim = 3")
     flat = {name: np.asarray(value).reshape((-1, *np.shape(value)[lead:])) for name, value in solution.outputs.items()}
     made = []
-    for i in range(flat["status"].shape[0]):
+    for i, here in enumerate(layouts):
         point = {name: value[i] for name, value in flat.items()}
         if not np.all(np.isfinite(point["filling"])):
             point |= {name: np.zeros_like(point[name]) for name in _ORDER}
             point["filling"] = np.full(2, 1e-9)
-        one = samples.uniform(point, layout.sites, layout.mass, layout.spacing, layout.depth, layout.planes)
+        one = samples.uniform(point, here.sites, here.mass, here.spacing, here.depth, here.planes)
         made.append(one)
     return made
 

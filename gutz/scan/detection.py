@@ -4,6 +4,7 @@ In:  a `Plan` whose file has [imaging]; values of its axes.
 Out: `Camera`, `Layout`; samples along a row of temperatures.
 """
 
+import math
 from collections.abc import Mapping, Sequence
 from typing import Any, NamedTuple
 
@@ -13,16 +14,18 @@ from numpy.typing import NDArray
 from gutz.errors import InputError
 from gutz.imaging import cooling
 from gutz.imaging.camera import RESONANT_LIGHT, Camera, resonant_cross_section
+from gutz.imaging.design import Knob, Samples
 from gutz.imaging.detect import Layout, of_solution
 from gutz.imaging.sample import Sample, of_cloud
 from gutz.optics import OpticalLattice
-from gutz.scan import clouds
+from gutz.scan import clouds, fields, parameters
 from gutz.scan.chunk import mixture_of
+from gutz.scan.fields import Beam, Energy
 from gutz.scan.imaging import ImagingSection
 from gutz.scan.parameters import IMAGING
 from gutz.scan.plan import Axis, Plan
 from gutz.solver import solve
-from gutz.units import PLANCK, to_si
+from gutz.units import PLANCK, from_si, to_si
 
 Floats = NDArray[np.float64]
 
@@ -146,3 +149,154 @@ def _clouds(plan: Plan, columns: Sequence[float], made: Layout, T: Floats) -> Ro
 def imaging_axes(plan: Plan) -> list[Axis]:
     """Axes that change the picture only."""
     return [axis for axis in plan.axes if axis.target.path in IMAGING]
+
+
+ERRORS = {"lattice.depth": 0.02, "lattice.a11": 0.01, "lattice.a22": 0.01, "lattice.a12": 0.01, "mixture.T": 0.1}
+"""Relative calibration errors (1 sigma) of the gas's settings, common in laboratories (common practice, no source)."""
+
+
+def knobs(plan: Plan, text: str, at: Mapping[str, float]) -> tuple[list[Knob], Plan]:
+    """Read "depth=8:20,tof" into knobs, and the plan with an axis for each setting of the gas, knobs last.
+
+    Bounds not given are those of the file's axis over the setting. Raises InputError for unknown knobs or no bounds.
+    """
+    found: list[Knob] = []
+    extended = [Axis(a.name, a.target, a.unit, a.words, np.array([at[a.name]])) for a in plan.axes]
+    moved: list[Axis] = []
+    for part in text.split(","):
+        name, equals, bounds = (piece.strip() for piece in part.partition("="))
+        axis = _knob_axis(plan, name)
+        known = next((a for a in plan.axes if a.target == axis.target), None)
+        if equals:
+            low, high = _bounds(name, bounds)
+        elif known is not None and known.values.size > 1:
+            low, high = float(known.values.min()), float(known.values.max())
+        else:
+            raise InputError(
+                f"--improve {name}: has no bounds; write {name}=low:high"
+                + (f" in {axis.unit}" if axis.unit != "1" else "")
+            )
+        start = at[known.name] if known is not None else _start(plan, axis)
+        if start is None:
+            raise InputError(f"--improve {name}: the file gives no single value of {axis.target.path} to start from")
+        camera_field = axis.target.path.partition(".")[2] if axis.target.path in IMAGING else ""
+        kind = axis.target.parameter.kind
+        si = float(to_si(1.0, kind, axis.unit)) if camera_field and kind in ("time", "length") else 1.0
+        if any(knob.name == name for knob in found):
+            raise InputError(f"--improve {name}: is named twice; name it once")
+        found.append(Knob(name, low, high, start, axis.unit, si, camera_field))
+        if not camera_field:
+            extended = [a for a in extended if a.target != axis.target]
+            moved.append(Axis(axis.name, axis.target, axis.unit, axis.words, np.array([start])))
+    axes = (*(a for a in extended if not any(a.target.overlaps(m.target) for m in moved)), *moved)
+    return found, Plan(plan.spec, axes, (1,) * len(axes))
+
+
+def _knob_axis(plan: Plan, name: str) -> Axis:
+    """An axis over the setting that a knob names: an axis of the file, or a parameter by its last word."""
+    for axis in plan.axes:
+        if name in (axis.name, axis.target.path):
+            return axis
+    paths = [path for path in parameters.PARAMETERS if name in (path, path.partition(".")[2])]
+    sections = {"lattice": plan.spec.lattice, "trap": plan.spec.trap}
+    paths = [p for p in paths if sections.get(p.partition(".")[0], plan.spec.mixture) is not None]
+    follows = ("t", "U", "U12") if plan.spec.lattice is not None else ()
+    if len(paths) != 1 or name in follows or paths[0] in ("imaging.shots", "imaging.significance"):
+        words = sorted({path.partition(".")[2] for path in parameters.PARAMETERS})
+        raise InputError(f"--improve {name[:40]}: is not a knob{fields.suggestion(name, tuple(words))}")
+    target = parameters.target(paths[0])
+    units = parameters.units_of(target.parameter, plan.spec.lattice is not None)
+    unit = "nK" if target.parameter.kind == "energy" and plan.spec.lattice is not None else (units or ("1",))[0]
+    return Axis(target.path.replace(".", "_"), target, unit, target.parameter.words, np.zeros(1))
+
+
+def _bounds(name: str, text: str) -> tuple[float, float]:
+    low, colon, high = text.partition(":")
+    try:
+        ends = float(low), float(high)
+    except ValueError:
+        ends = math.nan, math.nan
+    if not colon or not all(map(math.isfinite, ends)):
+        raise InputError(f"--improve {name}={text[:30]}: must be two numbers, for example {name}=5:25")
+    return ends
+
+
+def _start(plan: Plan, axis: Axis) -> float | None:
+    """The file's own value of a setting, in the axis's unit; None where it is not one number."""
+    home, _, name = axis.target.path.partition(".")
+    value: Any = getattr(getattr(plan.spec, home), name)
+    kind = axis.target.parameter.kind
+    if isinstance(value, tuple) and value and all(part == value[0] for part in value):
+        value = value[0] if kind == "depth" else value
+    if isinstance(value, Beam):
+        return value.value if value.unit == "E_R" else None
+    if isinstance(value, Energy):
+        return value.value if value.unit in (axis.unit, "") else None
+    if not isinstance(value, int | float):
+        return None
+    return float(from_si(value, kind, axis.unit)) if kind in ("time", "length") else float(value)
+
+
+def samples_of(plan: Plan, count: int) -> Samples:
+    """A function that makes samples where the last `count` axes of the plan take given values."""
+
+    def made(points: Floats) -> list[Sample]:
+        fixed = [float(axis.values[0]) for axis in plan.axes[: len(plan.axes) - count]]
+        columns = [np.full(len(points), value) for value in fixed] + [points[:, j] for j in range(count)]
+        names = [axis.name for axis in plan.axes]
+        layouts = [layout(plan, dict(zip(names, row_, strict=True))) for row_ in zip(*columns, strict=True)] or [
+            layout(plan, {})
+        ] * len(points)
+        if plan.spec.trap is not None:
+            return [_cloud_at(plan, [c[i] for c in columns], layouts[i]) for i in range(len(points))]
+        mixture = mixture_of(plan.settings_at(columns))
+        if mixture.shape != (len(points),):
+            mixture = mixture.map(lambda v: np.broadcast_to(v, (len(points), *v.shape[len(mixture.shape) :])))
+        return of_solution(solve(mixture, ansatz=plan.spec.ansatz.kind), layouts)
+
+    return made
+
+
+def _cloud_at(plan: Plan, columns: Sequence[float], made: Layout) -> Sample:
+    """A cloud at the file's own temperature. Raises InputError where the file gives none."""
+    fixed = tuple(
+        Axis(axis.name, axis.target, axis.unit, axis.words, np.array([value]))
+        for axis, value in zip(plan.axes, columns, strict=True)
+    )
+    point = next(iter(clouds.points(Plan(plan.spec, fixed, plan.chunk)))).point
+    if point.T is None:
+        raise InputError("--improve: a cloud needs mixture.T here; an entropy is not followed")
+    found = cooling.at_temperatures(point.gas, point.trap, point.atoms, np.array([point.T]))[0]
+    return of_cloud(found, made.mass, made.spacing, made.depth, made.planes)
+
+
+def moved(plan: Plan, values: Sequence[float]) -> Plan:
+    """The plan with its last axes at these values."""
+    first = len(plan.axes) - len(values)
+    axes = (
+        *plan.axes[:first],
+        *(
+            Axis(a.name, a.target, a.unit, a.words, np.array([float(v)]))
+            for a, v in zip(plan.axes[first:], values, strict=True)
+        ),
+    )
+    return Plan(plan.spec, axes, plan.chunk)
+
+
+def calibrated(plan: Plan) -> tuple[Samples, Floats, Floats]:
+    """Samples where the settings of `ERRORS` take given values, their values in this plan, and their errors."""
+    drawn: list[Axis] = []
+    errors: list[float] = []
+    for path, error in ERRORS.items():
+        own = [axis for axis in plan.axes if axis.target.path == path]
+        if not own and getattr(plan.spec, path.partition(".")[0]) is not None:
+            axis = _knob_axis(plan, path)
+            value = _start(plan, axis)
+            own = [] if value is None else [Axis(axis.name, axis.target, axis.unit, axis.words, np.array([value]))]
+        for axis in own:
+            if axis.values[0] != 0:
+                drawn.append(axis)
+                errors.append(error)
+    rest = tuple(axis for axis in plan.axes if axis not in drawn)
+    whole = Plan(plan.spec, (*rest, *drawn), (1,) * (len(rest) + len(drawn)))
+    return samples_of(whole, len(drawn)), np.array([float(axis.values[0]) for axis in drawn]), np.array(errors)
