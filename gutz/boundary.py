@@ -363,7 +363,7 @@ class _Tracer:
         before, now = (np.take_along_axis(v, largest, -1)[:, 0] for v in (wide, narrow))
         size = np.abs(order).max((0, 2))
         kind = np.where(now < 0.5 * before, Kind.ONSET, Kind.FIRST_ORDER)
-        kind = np.where(now < 1e-4 * size, Kind.DIMENSION, kind)
+        kind = np.where(before < 1e-3 * size, Kind.DIMENSION, kind)
         return np.where(size < 1e-9, Kind.CROSSOVER, kind).astype(np.int8), narrow.max(-1)
 
     def curve(self, chain: Sequence[_Segment]) -> Curve:

@@ -83,21 +83,45 @@ def _solve_numbers(mixture: Mixture, ansatz: str) -> tuple[dict[str, np.ndarray]
     size = mixture.shape[0]
     two = mixture.species == 2
     gone = limits.collapses(mixture.U, mixture.U12, mixture.n_max) if two else np.zeros(size, bool)
-    collector = _Collector(mixture, ansatz)
+    staggers = _may_stagger(mixture) if ansatz == "dressed" else np.zeros(size, bool)
+    collector = _Collector(mixture, ansatz, 2 if staggers.any() else mixture.sublattices)
     todo = np.flatnonzero(~gone)
     ladder = (mixture.n_max,) if mixture.n_max is not None else CUTOFF_LADDER[mixture.species]
     wanted = np.zeros(size) if mixture.n_max is not None else _expected_occupation(mixture)
     for step, n_max in enumerate(ladder):
         last = step == len(ladder) - 1
         now = todo if last else todo[wanted[todo] <= n_max - 2]
-        if now.size:
-            outputs, fields = targets.solve_points(mixture[now], n_max=n_max, ansatz=ansatz)
-            collector.put(now, outputs, fields, n_max)
-            full = np.zeros(now.size, bool) if last else outputs["cutoff_weight"] > CUTOFF_WEIGHT
-            todo = np.union1d(np.setdiff1d(todo, now), now[full])
+        for group in (now[~staggers[now]], now[staggers[now]]):
+            if not group.size:
+                continue
+            sublattices = 2 if staggers[group[0]] else mixture.sublattices
+            outputs, fields = targets.solve_points(mixture[group], n_max=n_max, ansatz=ansatz, sublattices=sublattices)
+            collector.put(group, outputs, fields, n_max)
+            full = np.zeros(group.size, bool) if last else outputs["cutoff_weight"] > CUTOFF_WEIGHT
+            todo = np.union1d(np.setdiff1d(todo, group), group[full])
         if not todo.size:
             break
     return collector.finish(mixture, gone)
+
+
+def _may_stagger(mixture: Mixture) -> np.ndarray:
+    """Where the exchange favours sublattices that differ: z-Néel order of sites with one atom, checkerboard of pairs.
+
+    Second order in the hopping: J_z > J_perp, with J_perp = 4 t1 t2/|U12| and J_z = 2 (t1² + t2²)/|U12| - 4 t1²/U1 -
+    4 t2²/U2 (Kuklov and Svistunov, PRL 90, 100401 (2003), Duan, Demler, Lukin, PRL 91, 090402 (2003); from memory), at
+    temperatures where that can order.
+    """
+    if mixture.species == 1 or mixture.sublattices == 2:
+        return np.zeros(mixture.shape[0], bool)
+    t, U, U12 = np.asarray(mixture.t), np.asarray(mixture.U), np.abs(np.asarray(mixture.U12))
+    squares = (t**2).sum(-1)
+    bound = U12 > 0
+    per = 1.0 / np.where(bound, U12, 1.0)
+    own = np.zeros_like(squares) if mixture.n_max == 1 else 4 * squares / np.maximum(U, 1e-300)
+    zz = 2 * squares.sum(-1) * per - own.sum(-1)
+    perp = 4 * (t[:, 0] * t[:, 1]).sum(-1) * per
+    cold = np.ones(zz.shape, bool) if mixture.T is None else np.asarray(mixture.T) < 2 * zz
+    return bound & cold & (zz > perp * (1 + 1e-9))
 
 
 def _expected_occupation(mixture: Mixture) -> np.ndarray:
@@ -111,10 +135,10 @@ def _expected_occupation(mixture: Mixture) -> np.ndarray:
 class _Collector:
     """Gathers groups of points with different cutoffs into whole arrays; points never put stay nan."""
 
-    def __init__(self, mixture: Mixture, ansatz: str) -> None:
+    def __init__(self, mixture: Mixture, ansatz: str, sublattices: int) -> None:
         size = mixture.shape[0]
         lengths = {"species": mixture.species, "species_": mixture.species, "direction": mixture.dim}
-        self.fields = np.zeros((size, mixture.sublattices, mixture.species))
+        self.fields = np.zeros((size, sublattices, mixture.species))
         self.outputs: dict[str, np.ndarray] = {}
         for name, variable in VARIABLES.items():
             if name not in ABSENT[ansatz]:

@@ -52,9 +52,14 @@ def solve_given(mixture: Mixture, mu: Array, T: Array, *, n_max: int, sublattice
     return jax.tree.map(lambda v: v[:size], full)
 
 
-def solve_points(mixture: Mixture, *, n_max: int, ansatz: str) -> tuple[Numbers, np.ndarray]:
-    """Solve a flat mixture of numbers, meeting its fillings and entropies. Returns outputs and fields."""
-    evaluate = Evaluator(mixture, n_max, ansatz)
+def solve_points(
+    mixture: Mixture, *, n_max: int, ansatz: str, sublattices: int | None = None
+) -> tuple[Numbers, np.ndarray]:
+    """Solve a flat mixture of numbers, meeting its fillings and entropies. Returns outputs and fields.
+
+    sublattices: 2 allows the two to differ; None takes what the mixture's offset asks for.
+    """
+    evaluate = Evaluator(mixture, n_max, ansatz, sublattices)
     size = mixture.shape[0]
     if mixture.filling is not None:
         mu, T, remark = _meet_fillings(mixture, evaluate)
@@ -72,14 +77,14 @@ def solve_points(mixture: Mixture, *, n_max: int, ansatz: str) -> tuple[Numbers,
 class Evaluator:
     """Global solves of chosen points at trial values of mu and T, as numpy arrays, in padded batches."""
 
-    def __init__(self, mixture: Mixture, n_max: int, ansatz: str) -> None:
+    def __init__(self, mixture: Mixture, n_max: int, ansatz: str, sublattices: int | None = None) -> None:
         # Missing directions are directions without hopping: one compilation serves 1D, 2D and 3D.
         missing = [(0, 0), (0, 0), (0, 3 - mixture.dim)]
         self.mixture = mixture.replace(filling=None, entropy=None, mu=None, T=None, t=np.pad(mixture.t, missing), dim=3)
         self.original = mixture
         self.n_max = n_max
         self.ansatz = ansatz
-        self.sublattices = mixture.sublattices
+        self.sublattices = mixture.sublattices if sublattices is None else sublattices
 
     def __call__(self, where: np.ndarray, mu: np.ndarray, T: np.ndarray) -> Batch:
         """Solve points `where` at mu (len(where), species) and T (len(where),)."""

@@ -72,3 +72,21 @@ def test_flat_density_fields_do_not_move_the_boundary():
     # F of free spins plus the exchange: -T ln 2 per site and a constant. Where the field is found it lowers F by 3e-6.
     np.testing.assert_allclose(sol.free_energy - sol.free_energy[0], -np.log(2) * (T - T[0]), atol=1e-5)
     np.testing.assert_allclose(sol.entropy, np.log(2), atol=5e-3)
+
+
+def test_exchange_that_favours_it_staggers_by_itself():
+    """(t1 - t2)²/(2 |U12|) > t1²/U1 + t2²/U2: z-Néel order of one atom per site, checkerboard of hard-core pairs.
+
+    Criterion of Kuklov and Svistunov, PRL 90, 100401 (2003) and Duan, Demler, Lukin, PRL 91, 090402 (2003), from
+    memory; mean field orders below z J_z/4, J_z = 2 (t1² + t2²)/|U12| for hard cores.
+    """
+    t = ((0.01,) * 3, (0.001,) * 3)
+    soft = gutz.solve(gutz.Mixture(t=t, U=1.0, U12=0.25, mu=0.125, n_max=3, T=[0.0002, 0.002]), "dressed")
+    assert soft.phase.tolist() == [gutz.Phase.NEEL, gutz.Phase.MOTT]
+    np.testing.assert_allclose(soft.staggering[:, 0], -soft.staggering[:, 1], atol=1e-9)
+    t = ((0.003,) * 3, (0.0003,) * 3)
+    T = np.array([0.95, 1.0]) * 6 * 2 * (0.003**2 + 0.0003**2) / 0.25 / 4
+    hard = gutz.solve(gutz.Mixture(t=t, U=1.0, U12=-0.25, mu=-0.125, n_max=1, T=T), "dressed")
+    assert hard.phase.tolist() == [gutz.Phase.DENSITY_WAVE, gutz.Phase.NORMAL]
+    np.testing.assert_allclose(hard.staggering[:, 0], hard.staggering[:, 1], atol=1e-9)
+    assert not (hard.status & int(gutz.Status.FALLBACK)).any()

@@ -273,6 +273,15 @@ class _Points:
                 state = self._at_own_temperature(family, state)
                 F = state.free_energy
                 lower = state.ok & np.isfinite(F) & (F + 1e-12 * (1.0 + np.abs(F)) < best.free_energy)
+                lower &= state.dressing <= families.DRESSING_LIMIT
+                if self.sublattices == 2 and family is Family.NORMAL:
+                    # A staggered field can run away to where it closes a gap: single atoms would order there.
+                    at = np.flatnonzero(lower)
+                    found = families.onset(
+                        evaluate.pick(self.sites, at), state.fields[at], np.ones(at.size),
+                        plan=Plan("full", self.names, (1.0,), self.n_max, self.species, self.cold),
+                    )  # fmt: skip
+                    lower[at] = (found.dressed > 0) & (found.product > 0)
                 best = _State(*(_where(lower, new, old) for new, old in zip(state, best, strict=True)))
         return best
 
