@@ -172,7 +172,7 @@ def _collective(cloud: Cloud) -> float:
 def _print_many(plan: Plan, table: xr.Dataset, phase: Phase | None) -> None:
     """A row per cloud: axes, T, entropy, filling, shares of the phases that occur."""
     flat = table.stack(cloud=table.attrs["axes"])
-    kelvin = np.isfinite(flat["T_nK"].values).all()
+    kelvin = np.isfinite(flat["temperature_nK"].values).all()
     words = [str(w) for w in table["phase"].values]
     shares = flat["fraction"].transpose("cloud", "phase").values
     shown = [k for k in range(len(words)) if shares[:, k].max() > LEAST_SHARE]
@@ -183,7 +183,7 @@ def _print_many(plan: Plan, table: xr.Dataset, phase: Phase | None) -> None:
     for i in range(flat.sizes["cloud"]):
         one = flat.isel(cloud=i)
         axes = [console.number(float(one[name].values), 4) for name in table.attrs["axes"]]
-        T = float(one["T_nK" if kelvin else "T"].values)
+        T = float(one["temperature_nK" if kelvin else "temperature"].values)
         line = [*axes, console.number(T, 4), console.number(float(one["entropy_per_particle"].values), 4)]
         line.append("  ".join(console.number(float(n), 3) for n in one["central_filling"].values))
         line += [f"{shares[i, k]:.1%}" for k in shown]

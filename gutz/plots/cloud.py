@@ -77,8 +77,8 @@ def loading(table: xr.Dataset, axis: str, facts: str) -> Figure:
         x = table[axis].values.astype(float)
         figure = new_figure(3, 1, width=12.0)
         first, second, third = figure.subplots(1, 3)
-        kelvin = np.isfinite(table["T_nK"].values).all()
-        name = "T_nK" if kelvin else "T"
+        kelvin = np.isfinite(table["temperature_nK"].values).all()
+        name = "temperature_nK" if kelvin else "temperature"
         unit = "nK" if kelvin else str(table.attrs.get("energy_unit", "1"))
         first.plot(x, table[name].values, color=style.LINE_COLOURS[0], lw=1.8, marker="o", ms=3)
         first.set_ylabel(style.quantity("Temperature in the lattice", unit), parse_math=False)

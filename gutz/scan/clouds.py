@@ -187,10 +187,13 @@ def table(
             rows.setdefault(name, []).append(value)
     data: dict[str, Any] = {}
     for name, (dims, units, words) in _COLUMNS.items():
+        if name in names:
+            continue  # an axis of this name holds the same numbers
         values = np.array(rows[name])
         shaped = values.reshape(plan.shape + values.shape[1:])
         data[name] = ((*names, *dims), shaped, {"units": attributes.with_energy(units, unit), "long_name": words})
-    data["status"][2].update(attributes.of_flags(Status, "Status"))
+    if "status" in data:
+        data["status"][2].update(attributes.of_flags(Status, "Status"))
     coords: dict[str, Any] = {
         axis.name: (
             axis.name,
@@ -221,8 +224,8 @@ PHONONS = {
 """What the entropy holds of the collective modes."""
 
 _COLUMNS: dict[str, tuple[tuple[str, ...], str, str]] = {
-    "T": ((), ENERGY, "Temperature"),
-    "T_nK": ((), "nK", "Temperature"),
+    "temperature": ((), ENERGY, "Temperature"),
+    "temperature_nK": ((), "nK", "Temperature"),
     "mu": (("species",), ENERGY, "Chemical potential at the bottom of the trap"),
     "atoms": (("species",), "1", "Atoms"),
     "entropy_per_particle": ((), "k_B", "Entropy per particle"),
@@ -246,8 +249,8 @@ def _row(point: CloudPoint, cloud: Cloud, margin: Margin | None) -> Mapping[str,
     by_phase, total = cloud.by_phase(), float(cloud.atoms.sum())
     zero = (np.zeros(1), 0.0)
     return {
-        "T": cloud.T,
-        "T_nK": nanokelvin(point, cloud),
+        "temperature": cloud.T,
+        "temperature_nK": nanokelvin(point, cloud),
         "mu": cloud.mu,
         "atoms": cloud.atoms,
         "entropy_per_particle": cloud.entropy_per_particle,

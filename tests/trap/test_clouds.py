@@ -67,6 +67,7 @@ def test_thomas_fermi_limit():
     assert profiles.shells(cloud)[-1].outer[0] == pytest.approx(np.sqrt(depth / c), rel=2e-2)
 
 
+@pytest.mark.slow
 def test_independent_species_on_a_plane_are_two_clouds_on_lines():
     """U12 = 0: traps of different shape need the plane, each species alone only a line; both must agree."""
     curvature = np.array([[0.004, 0.004, 0.004], [0.004, 0.004, 0.008]])
@@ -126,6 +127,7 @@ def test_collective_modes_cool_the_cloud():
     assert full.entropy_per_particle == pytest.approx(0.3, rel=1e-2)
 
 
+@pytest.mark.slow
 def test_a_jump_of_the_whole_cloud_is_shared_not_averaged():
     """Species that demix in one trap: equal numbers are met by two sides, each of one kind."""
     gas = LocalGas(Mixture(t=0.03, U=1.0, U12=2.5, mu=0.0, n_max=2))
