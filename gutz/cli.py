@@ -126,6 +126,13 @@ def solve(**options: Any) -> int:
 @_out("Folder for the results [default: the file's name].")
 @click.option("--resume", is_flag=True, help="Continue a run that was stopped.")
 @click.option("--netcdf", is_flag=True, help="Also write one netCDF file, data.nc.")
+@click.option("--adaptive", is_flag=True, help="Solve only where phases change, fill the rest; writes adaptive.nc.")
+@click.option(
+    "--nodes",
+    type=click.IntRange(2),
+    metavar="N",
+    help="With --adaptive: points of the coarse grid along the first two axes [default: 17].",
+)
 @click.option("--estimate", is_flag=True, help="Print points, chunks, time and size, and stop there.")
 @click.option(
     "--workers",
@@ -151,10 +158,15 @@ def scan(**options: Any) -> int:
 
         names = ("file", "overrides", "as_json", "quiet", "debug")
         return judge.run(**{name: options[name] for name in names})
+    if not options.pop("adaptive"):
+        if options.pop("nodes"):
+            raise click.UsageError("--nodes goes with --adaptive")
+    elif options.pop("netcdf"):
+        raise click.UsageError("--netcdf does not go with --adaptive, which writes adaptive.nc anyway")
     _load_numerics(quiet=options["quiet"])
     from gutz.commands import scan as command
 
-    return command.run(**options)
+    return command.run_adaptive(**options) if "nodes" in options else command.run(**options)
 
 
 @cli.command(

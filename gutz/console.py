@@ -77,10 +77,11 @@ def duration(seconds: float) -> str:
 
 
 @contextmanager
-def progress(words: str, quiet: bool, points: int = 0) -> Iterator[Any]:
+def progress(words: str, quiet: bool, points: int = 0, what: str = "chunks") -> Iterator[Any]:
     """Yield a function (done, total) that shows how far the work is, how fast it goes and how long it will take.
 
-    points: of the whole work, where the rate is to be told in points.
+    points: of the whole work, where the rate is to be told in points. what: is counted. Where the total grows as the
+    work goes on, no time is told.
     """
     if quiet:
         yield None
@@ -98,7 +99,7 @@ def progress(words: str, quiet: bool, points: int = 0) -> Iterator[Any]:
             found = pace.words(done, total)
             if time.monotonic() - last[0] >= LINE_EVERY:
                 last[0] = time.monotonic()
-                click.echo(", ".join(filter(None, (f"{words}: {done} of {total} chunks done", found))), err=True)
+                click.echo(", ".join(filter(None, (f"{words}: {done} of {total} {what} done", found))), err=True)
 
         yield line
 
@@ -109,14 +110,19 @@ class _Pace:
     def __init__(self, points: int) -> None:
         self._points = points
         self._first: tuple[int, float] | None = None
+        self._total = 0
+        self._grows = False
 
     def words(self, done: int, total: int) -> str:
         """Say both, or "" while there is nothing to judge by."""
         now = time.monotonic()
+        self._grows, self._total = self._grows or 0 < self._total < total, total
         if self._first is None or done <= self._first[0]:
             self._first = self._first or (done, now)
             return ""
         per_second = (done - self._first[0]) / max(now - self._first[1], 1e-9)
+        if self._grows:
+            return f"{_rate(per_second)} per s"
         left = duration((total - done) / per_second)
         if not self._points:
             return f"{left} left"
