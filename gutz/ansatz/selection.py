@@ -274,7 +274,7 @@ class _Points:
                 F = state.free_energy
                 lower = state.ok & np.isfinite(F) & (F + 1e-12 * (1.0 + np.abs(F)) < best.free_energy)
                 lower &= state.dressing <= families.DRESSING_LIMIT
-                if self.sublattices == 2 and family is Family.NORMAL:
+                if self.sublattices == 2 and family is Family.NORMAL and lower.any():
                     # A staggered field can run away to where it closes a gap: single atoms would order there.
                     at = np.flatnonzero(lower)
                     found = families.onset(
