@@ -162,7 +162,7 @@ def test_the_scan_files_are_right(capfd, name):
     assert record["points"] >= 100 and record["disk_bytes"] > record["points"] and len(record["sha256"]) == 64
 
 
-@pytest.mark.parametrize("command", ["", "check", "lattice", "scan", "solve"])
+@pytest.mark.parametrize("command", ["", "check", "lattice", "scan", "solve", "noise"])
 def test_help_starts_with_an_example_that_is_real(command):
     """F4: the example names an existing file, command and options; it is parsed, not run."""
     result = CliRunner().invoke(cli.cli, [*command.split(), "--help"])

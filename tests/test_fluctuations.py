@@ -7,9 +7,8 @@ import numpy as np
 import pytest
 
 import gutz
-from gutz.fluctuations import GaussianLayer, LocalSites, local_sites
+from gutz.fluctuations import GaussianLayer, LocalSites, local_sites, one_loop, spectrum
 from gutz.fluctuations.frequencies import nodes
-from gutz.fluctuations.spectrum import spectrum
 
 N_MAX = 6
 
@@ -140,6 +139,26 @@ def test_phonon_entropy_is_that_of_the_modes():
     isolated = dataclasses.replace(sites, hopping=np.zeros_like(sites.hopping))
     # Elastic scattering between equal levels, which has no mode, makes the rest of the difference.
     assert GaussianLayer(sites).one_loop(k)[1] == pytest.approx(entropy(sites) - entropy(isolated), rel=5e-3)
+
+
+def test_phonon_entropy_follows_debye():
+    """S = (2 π²/45) (T/c)³ per site at low T in 3D (Debye), with c the slope of the lowest mode."""
+    T = np.array([0.25, 0.5])
+    solution = gutz.solve(gutz.Mixture(t=1.0, U=10.0, filling=1.0, T=T, dim=3, species=1, n_max=N_MAX))
+    found = one_loop(solution, 48)
+    (sites, _) = local_sites(solution)
+    c = spectrum(sites, np.array([[0.01, 0.0, 0.0]])).energy[0, 0] / 0.01
+    assert found.entropy == pytest.approx(2 * np.pi**2 / 45 * (T / c) ** 3, rel=0.03)
+    assert not found.exceeds.any()
+    # More than a product of sites has: its own entropy is exponentially small here.
+    assert np.all(found.entropy > 10 * np.asarray(solution.entropy))
+
+
+def test_long_waves_in_one_dimension_are_reported():
+    solution = gutz.solve(gutz.Mixture(t=1.0, U=5.0, filling=1.0, T=1.0, dim=1, species=1, n_max=N_MAX))
+    assert bool(one_loop(solution, 400).exceeds)
+    with pytest.raises(gutz.errors.InputError, match="size is 1"):
+        one_loop(solution, 1)
 
 
 def test_interpolation_agrees_with_direct_evaluation():

@@ -52,6 +52,8 @@ def maps(solution: Solution, size: int | Sequence[int] = 32) -> list[tuple[Blend
         if own is None:
             out.append(None)
             continue
+        if own.sublattices == 2 and any(length % 2 for length in grid.shape):
+            raise InputError(f"size is {size}; a checkerboard needs an even number of sites along each direction")
         made, validity = recipes.best(own, other, grid, filling[n])
         if recipes.is_paired(own):
             worse = sum(exchange[n] > limit for limit in EXCHANGE_LIMITS)

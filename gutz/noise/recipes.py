@@ -42,6 +42,8 @@ WEAK = (0.80, 0.90)
 """Condensate fraction of the product state above which it is used alone: depletion is small, and it has it right."""
 LEFT = 0.27
 """Condensate fraction of the product state below which a dressed insulator takes over."""
+LONG_CHAIN = 16
+"""Sites above which a chain is longer than anything the recipes were tried on."""
 _WHOLE = 1e-3
 SMALL = 12.0
 """Sites up to which a lattice passes from one description to the next as smoothly as the rings and tori of the tests;
@@ -106,6 +108,8 @@ def fluctuating(sites: LocalSites, grid: Grid, filling: Floats) -> Fluctuating:
                 part[a] *= root
                 part[:, a] *= root
     unstable = bool((~found.finite).sum() > (1 if np.any(sites.ordered) else 0) * sites.sublattices)
+    # More atoms outside the condensate than there are: long waves have destroyed it.
+    unstable |= bool((mean[:, 0] < 0.0).any())
     return Fluctuating(
         sites,
         grid,
@@ -163,10 +167,8 @@ def cumulant(f: Fluctuating, *, local: bool = False) -> UniformMap:
     G, F = f.normal.copy(), f.anomalous.copy()
     zero = np.zeros(sites)
     zero[0] = 1.0
-    at_zero = np.ix_(range(species), range(species), [0])
     if local:
         G[:], F[:] = m.nu[..., None], m.m[..., None]
-        G[at_zero], F[at_zero] = m.nu[..., None], m.m[..., None]
     phi = f.phi
     core = np.zeros((species, species, 2, 2))
     core[..., 0, 0] = m.kap / sites
@@ -282,20 +284,26 @@ def _judge(own: Fluctuating, other: Fluctuating | None) -> Validity:
     chain = own.grid.dim == 1
     reference = other or own
     share = reference.condensed
-    if own.unstable or reference.unstable:
+    long_chain = chain and own.grid.sites > LONG_CHAIN
+    broken = own.sites.sublattices == 2 and bool(own.sites.ordered.any())
+    if own.unstable or reference.unstable or broken:
         return Validity.QUALITATIVE
     if share > 0:
         if share > (0.9 if chain else 0.75):
-            return Validity.GOOD
+            return Validity.FAIR if long_chain else Validity.GOOD
         filling = reference.moments.density.sum()
         commensurate = abs(filling - np.round(filling)) < 1e-2
         narrow = share > 0.7 or (commensurate and not chain and other is not None)
         return Validity.FAIR if narrow else Validity.QUALITATIVE
     limits = (0.5, 1.5) if chain else (0.6, 2.5)
-    if is_paired(own.sites):
+    paired = is_paired(own.sites)
+    if paired:
         limits = (0.15, 0.6)
     spread = _modulation(own)
-    return Validity(int(spread > limits[0]) + int(spread > limits[1]))
+    grade = int(spread > limits[0]) + int(spread > limits[1])
+    # Order of pairs decays along a chain; mean field knows nothing of it.
+    worst = (2 if long_chain else 1) if paired and chain else 0
+    return Validity(max(grade, worst))
 
 
 def _modulation(f: Fluctuating) -> float:
