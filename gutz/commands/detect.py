@@ -34,7 +34,7 @@ from gutz.units import BOLTZMANN
 NAME = "detect"
 TEMPERATURES = 20
 """Points of a curve where the file gives no temperatures."""
-_COLDEST, _HOTTEST = 0.05, 1.6
+_COLDEST, _HOTTEST = 0.05, 1.2
 _MEAN_FIELD = "temperatures are those of mean field and too high by about the ratio of the two critical temperatures"
 
 

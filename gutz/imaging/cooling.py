@@ -8,6 +8,8 @@ takes a minute a cloud. Here the nodes are few and the same at every temperature
 in one batch, and atom numbers are met to `ACCURACY`; sums of squared order come out within a few per cent.
 """
 
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -92,30 +94,30 @@ def _climb(
     gas: LocalGas, nodes: Nodes, atoms: FloatArray, mu: FloatArray, T: FloatArray
 ) -> tuple[FloatArray, States, NDArray[np.bool_]]:
     """Newton steps in mu (temperature, species) for all temperatures together; each backs off by itself."""
-    step = np.zeros_like(mu)
-    size = np.full(len(T), np.inf)
+    n = nodes.weight.size
+    step, best, size = np.zeros_like(mu), mu.copy(), np.full(len(T), np.inf)
     limit = np.full(len(T), 0.2 * gas.scale)
-    best = mu.copy()
     kept: States | None = None
+    active = np.arange(len(T))
     for _ in range(_ROUNDS):
-        states = _solve(gas, nodes, mu, T)
-        n = nodes.weight.size
-        totals = np.einsum("n,tna->ta", nodes.weight, states.of("filling").reshape(len(T), n, -1))
-        slope = np.einsum("n,tnab->tab", nodes.weight, states.response.reshape(len(T), n, *states.response.shape[1:]))
+        states = _solve(gas, nodes, mu[active], T[active])
+        totals = np.einsum("n,tna->ta", nodes.weight, states.of("filling").reshape(active.size, n, -1))
+        slope = np.einsum(
+            "n,tnab->tab", nodes.weight, states.response.reshape(active.size, n, *states.response.shape[1:])
+        )
         miss = np.abs(totals / atoms - 1.0).max(-1)
-        better = miss < size
-        kept = states if kept is None else _choose(better, states, kept, n)
-        best = np.where(better[:, None], mu, best)
-        limit = np.where(better, limit, 0.35 * limit)
+        better = miss < size[active]
+        kept = states if kept is None else _replaced(kept, states, active, better, n)
+        won, lost = active[better], active[~better]
         fresh = _steps(slope[:, : gas.species, : gas.species], atoms - totals, atoms.sum() / gas.scale)
-        step = np.where(better[:, None], fresh, step)
-        size = np.minimum(size, miss)
-        if np.all(size <= ACCURACY):
+        best[won], size[won], step[won] = mu[won], miss[better], fresh[better]
+        limit[lost] *= 0.35
+        active = np.flatnonzero(size > ACCURACY)
+        if not active.size:
             break
         length = np.abs(step).max(-1, keepdims=True)
-        move = step * np.minimum(1.0, limit[:, None] / np.maximum(length, 1e-300))
-        step = move
-        mu = np.where((size <= ACCURACY)[:, None], best, best + move)
+        step = step * np.minimum(1.0, limit[:, None] / np.maximum(length, 1e-300))
+        mu = best + step
     assert kept is not None
     return best, kept, size <= ACCURACY
 
@@ -127,15 +129,18 @@ def _steps(slope: FloatArray, miss: FloatArray, natural: float) -> FloatArray:
     return np.einsum("tab,tb->ta", vectors, along / np.maximum(values, 1e-3 * natural))
 
 
-def _choose(better: NDArray[np.bool_], new: States, old: States, n: int) -> States:
-    """States of the better trial, temperature by temperature."""
-    pick = np.repeat(better, n)
+def _replaced(old: States, new: States, active: NDArray[np.intp], better: NDArray[np.bool_], n: int) -> States:
+    """The old states with those of temperatures that came out better in their place."""
+    rows = (active[better][:, None] * n + np.arange(n)).ravel()
+    mine = np.repeat(better, n)
 
-    def mixed(a: FloatArray, b: FloatArray) -> FloatArray:
-        return np.where(pick.reshape((-1,) + (1,) * (a.ndim - 1)), a, b)
+    def mixed(a: NDArray[Any], b: NDArray[Any]) -> NDArray[Any]:
+        out = a.copy()
+        out[rows] = b[mine]
+        return out
 
-    outputs = {name: mixed(value, old.outputs[name]) for name, value in new.outputs.items()}
-    return States(outputs, mixed(new.response, old.response), np.where(pick, new.status, old.status))
+    outputs = {name: mixed(value, new.outputs[name]) for name, value in old.outputs.items()}
+    return States(outputs, mixed(old.response, new.response), mixed(old.status, new.status))
 
 
 def _solve(gas: LocalGas, nodes: Nodes, mu: FloatArray, T: FloatArray) -> States:

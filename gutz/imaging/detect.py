@@ -57,7 +57,7 @@ def shots_needed(
     if not (np.isfinite(significance) and significance > 0):
         raise InputError(f"significance is {significance:g}; it must be greater than 0")
     if isinstance(what, Solution):
-        made = of_solution(what, layout)
+        made = of_solution(what, layout, camera)
         outputs = {name: np.asarray(what.outputs[name]) for name in ("T", "entropy_per_particle", "phase", "status")}
         dims = tuple(f"axis_{i}" for i in range(len(what.shape)))
         shape = what.shape
@@ -103,8 +103,11 @@ def words(name: str) -> str:
     return _WORDS[name]["long_name"]
 
 
-def of_solution(solution: Solution, layout: Layout | Sequence[Layout]) -> list[Sample]:
-    """A uniform sample of every point of a solution, in flat order. layout: one for all, or one each."""
+def of_solution(solution: Solution, layout: Layout | Sequence[Layout], camera: Camera | None = None) -> list[Sample]:
+    """A uniform sample of every point of a solution, in flat order. layout: one for all, or one each.
+
+    camera: needed to follow the decay of order in planes at T > 0, which it resolves in part (see `in_planes`).
+    """
     if solution.mixture.species != 2:
         raise InputError("detection of pairs and anti-pairs needs two species; the solution has one")
     dim = solution.mixture.dim
@@ -123,6 +126,9 @@ def of_solution(solution: Solution, layout: Layout | Sequence[Layout]) -> list[S
             point |= {name: np.zeros_like(point[name]) for name in _ORDER}
             point["filling"] = np.full(2, 1e-9)
         one = samples.uniform(point, here.sites, here.mass, here.spacing, here.depth, here.planes)
+        if dim == 2 and camera is not None:
+            for channel in CHANNELS:
+                one = in_planes(camera, one, channel, float(point[f"exponent_{channel}"]))
         made.append(one)
     return made
 

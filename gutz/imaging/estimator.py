@@ -23,7 +23,7 @@ from gutz.imaging.sample import CHANNELS
 
 Floats = NDArray[np.float64]
 
-RESAMPLES = 400
+RESAMPLES = 2000
 """Bootstrap samples of the shots."""
 
 FEWEST_SHOTS = 3

@@ -118,7 +118,7 @@ def row(plan: Plan, values: Mapping[str, float], T: Floats) -> Row:
     solution = solve(mixture, ansatz=plan.spec.ansatz.kind)
     outputs = solution.outputs
     return Row(
-        T, of_solution(solution, made), np.asarray(outputs["entropy_per_particle"]),
+        T, of_solution(solution, made, camera(plan, values)), np.asarray(outputs["entropy_per_particle"]),
         np.asarray(outputs["phase"], np.int64), np.asarray(outputs["status"], np.int64), [],
     )  # fmt: skip
 

@@ -5,6 +5,7 @@ import jax.numpy as jnp
 import numpy as np
 import pytest
 from scipy import integrate
+from specimens import RUBIDIUM, box, sphere
 
 from gutz.errors import InputError
 from gutz.imaging.camera import Camera, reciprocal_length, resonant_cross_section
@@ -19,8 +20,6 @@ from gutz.imaging.expectation import (
     pixel_shape,
 )
 from gutz.imaging.sample import uniform
-
-from specimens import RUBIDIUM, box, sphere
 
 CAMERA = Camera(tof=20e-3)
 
