@@ -110,22 +110,31 @@ class NoiseMap(ABC):
     def entries(self, a: int, b: int, k: Indices, k_: Indices) -> Floats:
         """:C_ab:(k, k') at indices k and k', (..., dim) each, broadcast; a, b counted from 0."""
 
+    def _check_species(self, *labels: int) -> None:
+        for label in labels:
+            if isinstance(label, bool) or label not in range(self.species):
+                raise InputError(f"species is {label!r}; it must be one of {list(range(self.species))}, counted from 0")
+
     def difference_line(self, a: int, b: int, Q: Indices) -> Floats:
         """C_ab(k, k + Q) for every k, (sites,). Q = 0 is the bunching and counterflow channel."""
+        self._check_species(a, b)
         k = self.grid.indices()
         return self.entries(a, b, k, k + Q)
 
     def sum_line(self, a: int, b: int, Q: Indices) -> Floats:
         """C_ab(k, -k + Q) for every k, (sites,). Q = 0 is the pair channel."""
+        self._check_species(a, b)
         k = self.grid.indices()
         return self.entries(a, b, k, Q - k)
 
     def plane(self, a: int, b: int, k_: Indices) -> Floats:
         """C_ab(k, k') for every k at one k', shape of the grid."""
+        self._check_species(a, b)
         return self.entries(a, b, self.grid.indices(), k_).reshape(self.grid.shape)
 
     def full(self, a: int, b: int) -> Floats:
-        """The whole map, (sites, sites). Raises ResourceError above `MAX_ENTRIES`."""
+        """The whole map, (sites, sites). Raises InputError for a wrong species, ResourceError above `MAX_ENTRIES`."""
+        self._check_species(a, b)
         refuse_above(self.grid.sites**2, "the whole map")
         k = self.grid.indices()
         return self.entries(a, b, k[:, None], k[None, :])

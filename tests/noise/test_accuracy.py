@@ -41,13 +41,21 @@ def one_species(cluster, shape, bounds, filling=1.0):
             yield u, error(made.with_shot_noise(0, 0), exact_map(state, 0, 0)), error(made.mean[0], n), validity
 
 
+QUICK = {U: TORUS[U] for U in (4, 8, 14, 18, 30)}
+
+
 @pytest.mark.parametrize(
-    ("cluster", "shape", "bounds"), [(box((3, 3)), (3, 3), TORUS), (ring(6), (6,), RING)], ids=["torus", "ring"]
+    ("cluster", "shape", "bounds"),
+    [
+        pytest.param(box((3, 3)), (3, 3), QUICK, id="torus, some"),
+        pytest.param(box((3, 3)), (3, 3), TORUS, id="torus", marks=pytest.mark.slow),
+        pytest.param(ring(6), (6,), RING, id="ring", marks=pytest.mark.slow),
+    ],
 )
 def test_one_species_filling_one(cluster, shape, bounds):
     for U, found, in_n, validity in one_species(cluster, shape, bounds):
         assert found < bounds[U], f"U/t = {U}"
-        assert in_n < 0.16
+        assert in_n < 0.17
         # The class must not promise more than there is.
         assert found < {Validity.GOOD: 0.08, Validity.FAIR: 0.2}.get(validity, 1.0), f"U/t = {U}"
 

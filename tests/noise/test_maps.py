@@ -185,6 +185,13 @@ def test_bad_input_is_one_sentence(settings, error, words):
         gutz.noise_map(solution, **settings)
 
 
+def test_a_wrong_species_is_one_sentence():
+    (made, _), *_ = maps(solved(U=50.0, filling=1.0), 6)
+    for call in (made.full, lambda a, b: made.plane(a, b, np.zeros(1, int)), lambda a, b: made.sum_line(a, b, 0)):
+        with pytest.raises(InputError, match="species is 2"):
+            call(0, 2)
+
+
 def test_collapsed_points_stay_empty():
     mixture = gutz.Mixture(t=0.01, U=1.0, U12=np.array([-2.0, 0.5]), mu=0.25, dim=1, n_max=3)
     ds = gutz.noise_map(gutz.solve(mixture), 6)
