@@ -47,6 +47,7 @@ def test_worker_processes_are_started_where_they_pay(mixture_file, monkeypatch):
     monkeypatch.setattr(estimate, "usable_cores", lambda: [5])
     assert estimate.automatic_workers(full("axes.mu.points=4000", "axes.hop.points=40")) == 0
     assert estimate.time_limit(full()) > 3600
+    assert estimate.seconds_per_point(full("ansatz.kind=dressed")) > 3 * estimate.seconds_per_point(full())
 
 
 @pytest.mark.parametrize(
