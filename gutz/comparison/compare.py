@@ -155,7 +155,9 @@ def _of_solutions(every: dict[int, References], solutions: dict[str, Solution], 
         places = Places(t, U, U12, outputs["filling"], T, hard)
         mu = np.asarray(solutions[name].mu).reshape(size, -1)[:, 0] / t[:, 0]
         parts.append(_point_dataset(every, places, name, outputs, kept).assign(mu=("point", mu)))
-    return _described(xr.concat(parts, "ansatz", coords="minimal", compat="override", join="override"))
+    return _described(
+        xr.concat(parts, "ansatz", data_vars="minimal", coords="minimal", compat="override", join="override")
+    )
 
 
 def _point_dataset(

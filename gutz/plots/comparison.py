@@ -158,9 +158,9 @@ def _two_species(panel: Axes, stored: xr.Dataset) -> None:
     _shade(panel, t_axis, y_axis, values)
     _points(panel, x, y, error, some["overall"].values)
     phases = some["reference"].sel(observable="phase").values
-    for phase, place in ((Phase.COUNTERFLOW, 0.93), (Phase.PAIRED, -0.93), (Phase.SUPERFLUID, 0.12)):
+    for phase, place in ((Phase.COUNTERFLOW, 0.07), (Phase.PAIRED, -0.07)):
         if (phases == phase).any():
-            _name(panel, 0.03 * widest, place, WORDS[phase])
+            _name(panel, 0.03 * widest, place, f"{'↑' if place > 0 else '↓'} {WORDS[phase]}")
     panel.axhline(0, color=style.PALE_INK, lw=0.6, zorder=3)
     panel.set(xlim=(0, widest), ylim=_TWO["y"], xlabel="t / U", ylabel="Between the species: U12 / U")
 
