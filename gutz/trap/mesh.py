@@ -31,6 +31,8 @@ _STEP = 0.2
 _HIDDEN = 0.3
 """Entropy per site, k_B, that may hide where the total filling steps by one between two nodes: about half of log 2."""
 _LEAST_SHARE = 0.2
+_WORTH_KEEPING = 300
+"""Nodes up to which a neighbouring cloud takes them over: they only ever grow in number."""
 
 
 class Mesh(Protocol):
@@ -134,6 +136,8 @@ class _Line:
     def again(self, nodes: Nodes, old: FloatArray, y: FloatArray) -> Nodes | None:
         """As in `Mesh`."""
         assert nodes.line is not None
+        if nodes.weight.size > _WORTH_KEEPING:
+            return None
         stretch = float((_reach(self.gas, y, 1.03) / self.ratio).max()) / float(nodes.line[-1])
         return geometry.line_nodes(self.trap, nodes.line * stretch)
 

@@ -80,7 +80,8 @@ def main() -> None:
     first, cpu = curve(), time.process_time()
     again = curve()
     cpu = time.process_time() - cpu
-    print(f"loading curve, 20 depths, 10^5 atoms, with compilation: {first:.0f} s; again: {again:.0f} s ({cpu:.0f} s of cpu)")
+    seconds = f"with compilation: {first:.0f} s; again: {again:.0f} s ({cpu:.0f} s of cpu)"
+    print(f"loading curve, 20 depths, 10^5 atoms, {seconds}")
 
 
 if __name__ == "__main__":
