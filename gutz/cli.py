@@ -320,6 +320,7 @@ def noise(**options: Any) -> int:
     "--improve", metavar="KNOBS",
     help="Move settings within bounds to need fewer shots: depth,tof=5:25. Bounds also come from the file's axes.",
 )  # fmt: skip
+@click.option("--tell", is_flag=True, help="Which peak tells the candidate phases at a point apart.")
 @click.option("--shots-out", metavar="FILE", help="Write synthetic pictures of the coldest point (.nc, HDF5).")
 @click.option("--pictures", default=100, show_default=True, help="How many synthetic pictures of each species.")
 @click.option("--side", default=256, show_default=True, help="Pixels along a side of a synthetic picture.")

@@ -16,7 +16,7 @@ import xarray as xr
 from gutz import console, plots
 from gutz.commands.points import load, values
 from gutz.errors import InputError, OutputError
-from gutz.imaging import design
+from gutz.imaging import design, telling
 from gutz.imaging import detect as detecting
 from gutz.imaging import shots as synthetic
 from gutz.imaging.detect import Limit
@@ -27,6 +27,7 @@ from gutz.scan import detection, export, paths
 from gutz.scan.chunk import mixture_of
 from gutz.scan.detection import Row
 from gutz.scan.plan import Axis, Plan
+from gutz.solver import solve
 from gutz.status import UNTRUSTED, describe
 from gutz.temperature import CriticalTemperature, critical_temperature
 from gutz.units import BOLTZMANN
@@ -39,8 +40,9 @@ _MEAN_FIELD = "temperatures are those of mean field and too high by about the ra
 
 
 def run(
-    file: Path, overrides: Sequence[str], at: Sequence[str], improve: str | None, shots_out: str | None, seed: int,
-    pictures: int, side: int, out: str | None, as_json: bool, quiet: bool, force: bool, debug: bool,
+    file: Path, overrides: Sequence[str], at: Sequence[str], improve: str | None, tell: bool,
+    shots_out: str | None, seed: int, pictures: int, side: int,
+    out: str | None, as_json: bool, quiet: bool, force: bool, debug: bool,
 ) -> int:  # fmt: skip
     """Compute, print, draw; exit code 1 if some number is not to be trusted."""
     source, plan = load(file, overrides, clouds=True)
@@ -48,6 +50,8 @@ def run(
     chosen, free = _axes(plan, values(at))
     if improve is not None:
         return _improve(plan, chosen, improve, as_json)
+    if tell:
+        return _tell(plan, chosen, as_json)
     folder = _folder(out, force) if out else None
     critical = {channel: _critical(plan, chosen, channel) for channel in CHANNELS}
     T = _temperatures(plan, values(at), critical)
@@ -331,6 +335,44 @@ def _improve(plan: Plan, chosen: dict[str, float], text: str, as_json: bool) -> 
         )  # fmt: skip
     else:
         _print_improved(better, channel, spread)
+    return 0
+
+
+def _tell(plan: Plan, chosen: dict[str, float], as_json: bool) -> int:
+    """Print what the candidate phases at the point would show, and which peak tells them apart."""
+    if plan.spec.trap is not None:
+        raise InputError("--tell: compares phases of a uniform sample; leave [trap] out and give mu or filling")
+    mixture = mixture_of(plan.settings_at([np.array([chosen[axis.name]]) for axis in plan.axes]))
+    camera = detection.camera(plan, chosen)
+    significance = float(detection.given(plan, "significance", chosen))
+    found = [solve(mixture, ansatz="dressed"), solve(mixture, ansatz="product")]
+    listed = telling.candidates(found, camera, detection.layout(plan, chosen), significance)
+    verdicts = telling.verdicts(listed, camera, significance)
+    if as_json:
+        console.write_json({"candidates": [c._asdict() for c in listed], "verdicts": [v._asdict() for v in verdicts]})
+        return 0
+    rows = [
+        (
+            c.phase,
+            f"{c.condensate:.1%}",
+            *(f"{c.amplitude[k]:.2e}" for k in CHANNELS),
+            *(f"{c.ratio[k]:.3g}" for k in CHANNELS),
+        )
+        for c in listed
+    ]
+    console.table(("candidate", "condensed", "A at k' = -k", "A at k' = k", "A12/Aaa, -k", "A12/Aaa, k"), rows)
+    if len(listed) == 1:
+        console.say("both ansaetze find this phase here; there is no other candidate to tell it from")
+    for verdict in verdicts:
+        if np.isfinite(verdict.shots):
+            first, second = verdict.phases
+            console.say(
+                f"{first} or {second}: the peak at {WHERE[verdict.channel]} tells with {_shots(verdict.shots)} shots"
+            )
+    if any(c.condensate > 0 for c in listed):
+        console.say(
+            "a condensate shows Bragg peaks in the mean picture; its peak at k' = -k alone does not prove pairs"
+        )
     return 0
 
 

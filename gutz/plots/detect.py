@@ -64,8 +64,8 @@ def _curves(left: Axes, right: Axes, dataset: xr.Dataset) -> None:
             left.axvline(T_c, color=colour, lw=1.0, ls=":")
             _upright(left, T_c, "T_c, best estimate", colour)
         if np.isfinite(ends):
-            _upright(left, ends, "order ends (mean field)", colour)
-            _upright(right, ends_at, "order ends (mean field)", colour)
+            _upright(left, ends, "order ends (mean field)", colour, after=True)
+            _upright(right, ends_at, "order ends (mean field)", colour, after=True)
         left.set_title(_WORDS[channel], loc="left", color=colour)
     for panel in (left, right):
         panel.axhline(allowed, color=style.PALE_INK, lw=0.8)
@@ -81,10 +81,11 @@ def _curves(left: Axes, right: Axes, dataset: xr.Dataset) -> None:
         left.set_title("no order at these temperatures", loc="left")
 
 
-def _upright(panel: Axes, x: float, words: str, colour: str) -> None:
+def _upright(panel: Axes, x: float, words: str, colour: str, after: bool = False) -> None:
+    """Words along a line, before it or after it."""
     panel.annotate(
-        words, (x, 0.97), (-3, 0), xycoords=("data", "axes fraction"), textcoords="offset points", rotation=90,
-        ha="right", va="top", size=style.SMALL_SIZE, color=colour,
+        words, (x, 0.97), (3 if after else -3, 0), xycoords=("data", "axes fraction"), textcoords="offset points", rotation=90,
+        ha="left" if after else "right", va="top", size=style.SMALL_SIZE, color=colour,
     )  # fmt: skip
 
 
