@@ -92,14 +92,19 @@ def run(
     source, full = load(path, overrides)
     folder = paths.output_folder(str(out) if out is not None else Path(path).stem)
     paths.make_folder(folder)
-    with guard.locked(folder):
+    pieces = math.prod(full.chunks)
+    with (
+        guard.locked(folder),
+        guard.stoppable(notice) as stop,
+        # First of all, so that a cluster that cannot be used leaves no run behind.
+        crew_of(full, pieces, executor, in_flight, workers, scheduler) as crew,
+    ):
         if force and not resume:
             store.remove(folder)
         guard.check_disk(folder, schema.bytes_per_point(full) * full.points)
         target = _opened(folder, full, source, resume)
         todo = [index for index in full.indices() if not target.done(index)]
-        with guard.stoppable(notice) as stop, crew_of(full, len(todo), executor, in_flight, workers, scheduler) as crew:
-            return _work(folder, full, target, todo, progress, stop, crew, limit or estimate.time_limit(full))
+        return _work(folder, full, target, todo, progress, stop, crew, limit or estimate.time_limit(full))
 
 
 def _opened(folder: Path, full: Plan, source: Document, resume: bool) -> store.Store:

@@ -129,7 +129,7 @@ def test_an_address_where_nobody_answers_is_one_sentence(quick_workers, mixture_
         port = free.getsockname()[1]
     for address in (f"tcp://127.0.0.1:{port}", "nonsense", "http://x:y", ""):
         with warnings.catch_warnings(), pytest.raises(InputError, match="no Dask scheduler answers there"):
-            quick_workers.run(mixture_file, tmp_path / "out", scheduler=address, force=True)
+            quick_workers.run(mixture_file, tmp_path / "out", scheduler=address)
 
 
 def test_without_dask_the_package_is_named(monkeypatch):
