@@ -46,7 +46,7 @@ def maps(solution: Solution, size: int | Sequence[int] = 32) -> list[tuple[Blend
     if solution.ansatz == "dressed":
         wanted = np.array([own is not None and not recipes.is_paired(own) for own in sites], bool)
         companions = _companions(solution, filling, wanted)
-    exchange = _exchange(solution)
+    exchange, trusted = _exchange(solution), np.asarray(solution.trusted).ravel()
     out: list[tuple[BlendedMap, Validity] | None] = []
     for n, (own, other) in enumerate(zip(sites, companions, strict=True)):
         if own is None:
@@ -58,6 +58,8 @@ def maps(solution: Solution, size: int | Sequence[int] = 32) -> list[tuple[Blend
         if recipes.is_paired(own):
             worse = sum(exchange[n] > limit for limit in EXCHANGE_LIMITS)
             validity = Validity(max(int(validity), worse))
+        if not trusted[n]:
+            validity = Validity.QUALITATIVE
         out.append((made, validity))
     return out
 

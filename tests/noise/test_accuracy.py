@@ -34,8 +34,11 @@ def one_species(cluster, shape, bounds, filling=1.0):
     for begin in range(0, len(values), 8):
         U = np.array(values[begin : begin + 8], float)
         mixture = gutz.Mixture(t=1.0, U=U, filling=filling, dim=len(shape), species=1, n_max=6)
-        found = maps(gutz.solve(mixture, ansatz="dressed"), shape)
-        for u, (made, validity) in zip(U, found, strict=True):
+        solution = gutz.solve(mixture, ansatz="dressed")
+        for u, (made, validity), trusted in zip(U, maps(solution, shape), np.asarray(solution.trusted), strict=True):
+            if not trusted:  # no uniform state of this filling: nothing to compare
+                assert validity is Validity.QUALITATIVE
+                continue
             state = ed.ground_state(LatticeModel(cluster, t=(1.0,), U=(u,), n_max=5), atoms)
             n = ed.momentum_distribution(state, 0)
             yield u, error(made.with_shot_noise(0, 0), exact_map(state, 0, 0)), error(made.mean[0], n), validity

@@ -73,12 +73,14 @@ def test_from_file_to_figure(capfd, file, tmp_path):
 
 
 def test_json_is_json_and_nothing_else(capfd, file):
-    code, out, err = gutz(capfd, "noise", file, "--at", "mu=0.3", "--at", "t=0.5", "--size", "16", "--json")
+    code, out, err = gutz(capfd, "noise", file, "--at", "mu=0.4", "--at", "t=0.1", "--size", "16", "--json")
     assert err == ""
     record = json.loads(out)
     names = {feature["name"] for feature in record["features"]}
     assert {"condensate peak of n(k)", "negative lines", "pairing of one species"} <= names
-    assert record["validity"] == "good" and code == (0 if record["trusted"] else 1)
+    # A superfluid close to the transition in one dimension: converged, but no map to rely on.
+    assert record["trusted"]
+    assert (record["validity"], code) == ("qualitative", 1)
     assert all(np.isfinite(feature["height"]) for feature in record["features"])
 
 
