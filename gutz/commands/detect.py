@@ -54,7 +54,7 @@ def run(
         return _tell(plan, chosen, as_json)
     folder = _folder(out, force) if out else None
     critical = {channel: _critical(plan, chosen, channel) for channel in CHANNELS}
-    T = _temperatures(plan, values(at), critical)
+    T = _temperatures(plan, values(at), chosen, critical)
     row = detection.row(plan, chosen, T)
     curves = [_curve(plan, {**chosen, **_value(free, i)}, row) for i in range(free.values.size if free else 1)]
     dataset = _dataset(plan, row, curves, free, critical, made.shots, made.significance)
@@ -103,7 +103,12 @@ def _critical(plan: Plan, chosen: dict[str, float], channel: str) -> CriticalTem
     return found if float(np.ravel(found.T_c)[0]) > 0 else None
 
 
-def _temperatures(plan: Plan, at: dict[str, float], critical: dict[str, CriticalTemperature | None]) -> np.ndarray:
+_ANYWHERE = {"mu": 0.0, "filling": None, "T": 0.0, "entropy": None}
+
+
+def _temperatures(
+    plan: Plan, at: dict[str, float], chosen: dict[str, float], critical: dict[str, CriticalTemperature | None]
+) -> np.ndarray:
     """The file's axis of temperature, or a row that reaches beyond the mean-field critical temperature."""
     warm = [axis for axis in plan.axes if axis.target.path == "mixture.T" and axis.name not in at]
     if warm:
@@ -113,9 +118,15 @@ def _temperatures(plan: Plan, at: dict[str, float], critical: dict[str, Critical
         return np.sort(np.asarray(settings["T"], float))
     bare = max((float(np.ravel(found.T_c_bare)[0]) for found in critical.values() if found is not None), default=0.0)
     if bare == 0:
-        raise InputError(
-            "no critical temperature is known here to lay out temperatures; add an axis over mixture.T to the file"
-        )
+        # Without an estimate, the scale of the exchange: z t_1 t_2/|U12|.
+        cool = detection.plan_without_warmth(plan)
+        mixture = mixture_of(cool.settings_at([np.array([chosen[axis.name]]) for axis in cool.axes]) | _ANYWHERE)
+        strength = float(np.abs(np.ravel(mixture.U12)[0]))
+        bare = float(2.0 * np.prod(np.asarray(mixture.t).reshape(2, -1), axis=0).sum() / max(strength, 1e-300))
+        if strength == 0 or bare == 0:
+            raise InputError(
+                "nothing exchanges here, so no temperatures follow; add an axis over mixture.T to the file"
+            )
     return np.linspace(_COLDEST, _HOTTEST, TEMPERATURES) * bare
 
 

@@ -143,9 +143,11 @@ def _smeared(fine: Floats, screen: Screen, rms: float) -> Floats:
     step = screen.pixel / screen.fine
     narrow = np.sqrt(max(rms**2 - step**2 / 12.0, 0.0)) / step
     n = fine.shape[0]
-    f = fft.rfftfreq(n), fft.fftfreq(n)
-    kernel = np.exp(-2.0 * (np.pi * narrow) ** 2 * (f[1][:, None] ** 2 + f[0][None, :] ** 2))
-    return np.asarray(fft.irfft2(fft.rfft2(fine) * kernel, s=fine.shape))
+    x, y = (np.exp(-2.0 * (np.pi * narrow * f) ** 2) for f in (fft.rfftfreq(n), fft.fftfreq(n)))
+    spectrum = fft.rfft2(fine, workers=2)
+    spectrum *= x[None, :]
+    spectrum *= y[:, None]
+    return np.asarray(fft.irfft2(spectrum, s=fine.shape, workers=2))
 
 
 def _photon_noise(camera: Camera, sample: Sample, screen: Screen) -> Floats | None:
@@ -216,8 +218,9 @@ def _partners(first: Floats, pair: bool, ell: float, width: Floats, rng: np.rand
     base = -first if pair else first
     out = np.empty_like(base)
     for axis in (0, 1):
-        reach = int(np.ceil(6.0 * width[axis] / ell)) + 1
-        copies = base[:, axis, None] + ell * np.arange(-reach, reach + 1)
+        reach = int(np.ceil(4.5 * width[axis] / ell))
+        nearest = base[:, axis] - ell * np.round(base[:, axis] / ell)
+        copies = nearest[:, None] + ell * np.arange(-reach, reach + 1)
         weight = np.exp(-(copies**2) / (2.0 * width[axis] ** 2))
         total = np.cumsum(weight, -1)
         chosen = (rng.random(len(base))[:, None] * total[:, -1:] > total).sum(-1)

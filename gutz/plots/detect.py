@@ -84,8 +84,8 @@ def _curves(left: Axes, right: Axes, dataset: xr.Dataset) -> None:
 def _upright(panel: Axes, x: float, words: str, colour: str, after: bool = False) -> None:
     """Words along a line, before it or after it."""
     panel.annotate(
-        words, (x, 0.97), (3 if after else -3, 0), xycoords=("data", "axes fraction"), textcoords="offset points", rotation=90,
-        ha="left" if after else "right", va="top", size=style.SMALL_SIZE, color=colour,
+        words, (x, 0.97), (3 if after else -3, 0), xycoords=("data", "axes fraction"), textcoords="offset points",
+        rotation=90, ha="left" if after else "right", va="top", size=style.SMALL_SIZE, color=colour,
     )  # fmt: skip
 
 
