@@ -45,6 +45,9 @@ node crossing the border of a shell."""
 
 _ROUNDS = 16
 
+_SHARE_SAID = 0.01
+"""Share of the atoms in local states with a remark above which the cloud bears the remark."""
+
 _MOST_REPEATS = 8
 _MODES_MET = 4e-3
 """Entropy of the collective modes, relative to the whole, at which it agrees with what was assumed."""
@@ -358,6 +361,10 @@ def _finish(
         U = np.asarray(gas.mixture.U)[0]
         if float(gas.mixture.U12[0]) > np.sqrt(U[0] * U[1]):
             status |= Status.DEMIXING
+    atoms = nodes.weight * best.states.of("filling").sum(-1)
+    for bit in (Status.NOT_CONVERGED, Status.NOT_FINITE, Status.FALLBACK, Status.DRESSING_LARGE):
+        if atoms[(best.states.status & int(bit)) > 0].sum() > _SHARE_SAID * atoms.sum():
+            status |= bit
     if np.any(error > 3.0 * problem.tolerance):
         notes.append(f"the finest nodes used leave an error of about {error.max():.1%} in numbers or entropy")
     notes += tight(trap, gas, best.y, nodes)
