@@ -1,4 +1,4 @@
-"""The command `gutz`: lattice, solve, scan, check.
+"""The command `gutz` and its subcommands.
 
 In:  a scan file (TOML) and options.
 Out: results on stdout, notes on stderr, files in the folder named with --out, and an exit code:
