@@ -12,7 +12,6 @@ import time
 import warnings
 from collections.abc import Callable
 from concurrent.futures import CancelledError, Future
-from importlib import import_module
 from importlib.metadata import version
 from types import TracebackType
 from typing import Any
@@ -141,9 +140,10 @@ class Cluster:
 
 def _dask() -> Any:
     try:
-        return import_module("distributed")
+        import distributed
     except ImportError:
         raise InputError("--scheduler needs a package that is not installed: pip install 'dask[distributed]'") from None
+    return distributed
 
 
 def _versions() -> dict[str, str]:
