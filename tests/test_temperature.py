@@ -275,7 +275,7 @@ def test_statuses():
 def test_mistakes_are_named():
     with pytest.raises(InputError, match="order is 'triple'"):
         critical_temperature(Mixture(t=0.01, U=1.0, U12=0.5, mu=0.2), "triple")  # type: ignore[arg-type]
-    with pytest.raises(InputError, match="call it outside jax.jit and jax.grad"):
+    with pytest.raises(InputError, match="outside jax.jit and jax.grad"):
         jax.grad(lambda t: critical_temperature(Mixture(t=t, U=1.0, U12=0.5, mu=0.2), "single").T_c)(0.01)
     with pytest.raises(InputError, match="species is 1"):
         critical_temperature(Mixture(t=0.01, U=1.0, mu=0.2, species=1))
