@@ -27,6 +27,7 @@ LOST_SECONDS = 60.0
 PER_WORKER = 2
 """Pieces handed over per worker, so that none waits for this process."""
 RETRIES = 2
+_ATTEMPTS = 3
 """How often Dask repeats a piece that fails."""
 
 
@@ -81,16 +82,20 @@ class Cluster:
         self._client.close()
 
     def _connected(self) -> Any:
-        try:
-            with warnings.catch_warnings():
-                # Dask compares more versions than matter here; those that do are checked below.
-                warnings.simplefilter("ignore")
-                return self._dask.Client(self._address, timeout=CONNECT_SECONDS, set_as_default=False)
-        except (OSError, ValueError, TypeError):
-            raise InputError(
-                f"--scheduler {self._address}: no Dask scheduler answers there; "
-                'start one with "dask scheduler" and give the address it prints, such as tcp://10.0.0.1:8786'
-            ) from None
+        for _ in range(_ATTEMPTS):
+            try:
+                with warnings.catch_warnings():
+                    # Dask compares more versions than matter here; those that do are checked below.
+                    warnings.simplefilter("ignore")
+                    return self._dask.Client(self._address, timeout=CONNECT_SECONDS, set_as_default=False)
+            except AssertionError:
+                continue  # on a busy machine its event loop may not start within the ten seconds Dask gives it
+            except (OSError, ValueError, TypeError):
+                raise InputError(
+                    f"--scheduler {self._address}: no Dask scheduler answers there; "
+                    'start one with "dask scheduler" and give the address it prints, such as tcp://10.0.0.1:8786'
+                ) from None
+        raise ResourceError("the Dask client does not start; this machine is too busy, try again later")
 
     def _workers(self) -> dict[str, Any]:
         try:
