@@ -27,8 +27,8 @@ LOST_SECONDS = 60.0
 PER_WORKER = 2
 """Pieces handed over per worker, so that none waits for this process."""
 RETRIES = 2
-_ATTEMPTS = 3
 """How often Dask repeats a piece that fails."""
+_ATTEMPTS = 3
 
 
 class Cluster:
