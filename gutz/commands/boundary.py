@@ -15,7 +15,7 @@ import xarray as xr
 from gutz import console, plots
 from gutz.boundary import KIND_WORDS, Kind
 from gutz.commands.points import load, values
-from gutz.errors import InputError, OutputError
+from gutz.errors import InputError
 from gutz.phases import WORDS, Phase
 from gutz.scan import edges, export, paths, store
 from gutz.scan.plan import Plan, check_physics
@@ -42,9 +42,7 @@ def run(
     check_physics(full)
     held = values(at)
     names = axes or _first_two(full, held)
-    folder = paths.output_folder(out or file.stem)
-    if folder.exists() and paths.inside(folder, DATA).exists() and not force:
-        raise OutputError(f"{folder.name} holds {DATA} already; choose another --out or replace it with --force")
+    folder = paths.results_folder(out or file.stem, DATA, force)
     found = edges.trace(full, document, names, held, nodes=nodes, straightness=straightness)
     paths.make_folder(folder)
     export.write_netcdf(found, paths.inside(folder, DATA))

@@ -20,7 +20,7 @@ from gutz.phases import WORDS, Phase
 from gutz.plots import cloud as figures
 from gutz.scan import clouds, export, paths
 from gutz.scan.clouds import CloudPoint
-from gutz.scan.plan import Axis, Plan, check_physics
+from gutz.scan.plan import Axis, Plan, check_names, check_physics
 from gutz.status import SENTENCES, UNTRUSTED, Status, describe
 from gutz.trap import loading, profiles
 from gutz.trap.cloud import Cloud
@@ -91,10 +91,7 @@ def run(
 
 def _fixed(full: Plan, at: dict[str, float]) -> Plan:
     """The plan with the axes named in --at held at their values."""
-    names = [axis.name for axis in full.axes]
-    for name in at:
-        if name not in names:
-            raise InputError(f"--at {name}: is not an axis of this file; its axes are {', '.join(names) or 'none'}")
+    check_names(full, at)
     axes = []
     for axis in full.axes:
         lowest = axis.target.parameter.lowest

@@ -13,12 +13,12 @@ import xarray as xr
 
 from gutz import console, plots
 from gutz.commands.points import load, values
-from gutz.errors import InputError, OutputError
+from gutz.errors import InputError
 from gutz.phases import WORDS, Phase
 from gutz.plots import critical as figure
 from gutz.scan import export, paths
 from gutz.scan.chunk import mixture_of
-from gutz.scan.plan import Axis, Plan, check_physics
+from gutz.scan.plan import Axis, Plan, check_names, check_physics
 from gutz.status import UNTRUSTED, describe
 from gutz.temperature import REASONS, CriticalTemperature, Reason, critical_temperature
 
@@ -57,10 +57,7 @@ def run(
 
 def _line(full: Plan, at: dict[str, float]) -> tuple[Axis | None, list[np.ndarray]]:
     """The one axis to run along, and values for every axis; axes of temperature and entropy do not count."""
-    known = [axis.name for axis in full.axes]
-    for name in at:
-        if name not in known:
-            raise InputError(f"--at {name}: is not an axis of this file; its axes are {', '.join(known) or 'none'}")
+    check_names(full, at)
     warm = [axis.name for axis in full.axes if axis.target.path in ("mixture.T", "mixture.entropy")]
     free = [axis for axis in full.axes if axis.name not in at and axis.name not in warm]
     if len(free) > 1:
@@ -122,9 +119,7 @@ def _save(
 ) -> None:
     if axis is None:
         raise InputError("--out: a figure needs an axis to run along; leave one axis of the file without --at")
-    folder = paths.output_folder(out)
-    if folder.exists() and paths.inside(folder, f"{NAME}.nc").exists() and not force:
-        raise OutputError(f"{folder.name} holds {NAME}.nc already; choose another --out or replace it with --force")
+    folder = paths.results_folder(out, f"{NAME}.nc", force)
     paths.make_folder(folder)
     units = {**dict.fromkeys(_SHOWN, "k_B"), **dict.fromkeys(("T_c", "T_c_plain", "T_c_bare"), full.energy_unit)}
     data = {

@@ -26,7 +26,7 @@ from gutz.plots import detect as figure
 from gutz.scan import detection, export, paths
 from gutz.scan.chunk import mixture_of
 from gutz.scan.detection import Row
-from gutz.scan.plan import Axis, Plan
+from gutz.scan.plan import Axis, Plan, check_names
 from gutz.solver import solve
 from gutz.status import UNTRUSTED, describe
 from gutz.temperature import CriticalTemperature, critical_temperature
@@ -71,10 +71,7 @@ def run(
 
 def _axes(plan: Plan, at: dict[str, float]) -> tuple[dict[str, float], Axis | None]:
     """A value for every axis, and the one axis of the camera that is free. Raises InputError for missing values."""
-    known = [axis.name for axis in plan.axes]
-    for name in at:
-        if name not in known:
-            raise InputError(f"--at {name}: is not an axis of this file; its axes are {', '.join(known) or 'none'}")
+    check_names(plan, at)
     camera = [axis for axis in detection.imaging_axes(plan) if axis.name not in at]
     if len(camera) > 1:
         raise InputError(f"one axis of the camera may be free; give the others a value: --at {camera[1].name}=..")
@@ -418,9 +415,7 @@ def _shots(count: float) -> str:
 
 
 def _folder(out: str, force: bool) -> Path:
-    folder = paths.output_folder(out)
-    if folder.exists() and paths.inside(folder, f"{NAME}.nc").exists() and not force:
-        raise OutputError(f"{folder.name} holds {NAME}.nc already; choose another --out or replace it with --force")
+    folder = paths.results_folder(out, f"{NAME}.nc", force)
     paths.make_folder(folder)
     return folder
 

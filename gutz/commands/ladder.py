@@ -11,7 +11,6 @@ import numpy as np
 
 from gutz import console, ladder, plots
 from gutz.commands.points import load, values
-from gutz.errors import OutputError
 from gutz.phases import words
 from gutz.plots import ladder as figure
 from gutz.scan import paths
@@ -46,12 +45,8 @@ def run(
     else:
         _print(climbed, chosen)
     if out is not None:
-        folder = paths.output_folder(out)
+        folder = paths.results_folder(out, f"{NAME}.png", force)
         paths.make_folder(folder)
-        if paths.inside(folder, f"{NAME}.png").exists() and not force:
-            raise OutputError(
-                f"{folder.name} holds {NAME}.png already; choose another --out or replace it with --force"
-            )
         where = ", ".join(f"{name} = {value:g}" for name, value in chosen.items())
         title = full.spec.output.title or document.name.removesuffix(".toml")
         made = plots.save(figure.draw(climbed, title, where), paths.inside(folder, NAME))

@@ -15,7 +15,7 @@ from gutz.commands.points import load, values
 from gutz.errors import InputError, OutputError
 from gutz.optics import HubbardParameters
 from gutz.scan import paths
-from gutz.scan.plan import Axis, Plan
+from gutz.scan.plan import Axis, Plan, check_names
 
 MOST_ROWS = 21
 UNITS = ("Hz", "kHz", "nK", "uK", "E_R", "U1")
@@ -56,10 +56,7 @@ def run(
 def _choose(full: Plan, at: dict[str, float]) -> tuple[Axis | None, list[Any]]:
     """The one lattice axis to run along, and values for every axis: the others are held where --at says."""
     along = [a for a in full.axes if a.target.path.startswith("lattice.") and a.name not in at]
-    names = [a.name for a in full.axes]
-    for name in at:
-        if name not in names:
-            raise InputError(f"--at {name}: is not an axis of this file; its axes are {', '.join(names) or 'none'}")
+    check_names(full, at)
     if len(along) > 1:
         held = " ".join(f"--at {a.name}={a.values[0]:g}" for a in along[1:])
         raise InputError(f"the file has {len(along)} lattice axes; keep one and fix the others, for example {held}")

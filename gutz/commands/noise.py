@@ -75,9 +75,7 @@ def read_size(text: str) -> int | tuple[int, ...]:
 
 def _folder(out: str, force: bool) -> Path:
     """Make the folder. Raises OutputError where it holds a map already."""
-    folder = paths.output_folder(out)
-    if (folder / DATA).exists() and not force:
-        raise OutputError(f"{folder.name} holds {DATA} already; choose another --out or replace it with --force")
+    folder = paths.results_folder(out, DATA, force)
     paths.make_folder(folder)
     return folder
 

@@ -108,15 +108,18 @@ def _draw(folder: Path, dataset: xr.Dataset) -> list[str]:
 
 
 def _refined_record(outcome: Refined, files: Sequence[str]) -> dict[str, Any]:
+    return _common_record(outcome, files) | {"solves": outcome.solves, "failed": list(outcome.failed)}
+
+
+def _common_record(outcome: Outcome | Refined, files: Sequence[str]) -> dict[str, Any]:
+    """What both kinds of scan report alike."""
     return {
         "folder": str(outcome.folder),
         "files": list(files),
         "points": outcome.points,
-        "solves": outcome.solves,
         "computed": outcome.computed,
         "untrusted": outcome.untrusted,
         "stopped": bool(outcome.stopped),
-        "failed": list(outcome.failed),
         "workers": outcome.workers,
         "peak_bytes": outcome.peak_bytes,
         "remarks": {str(bit.name).lower(): count for bit, count in outcome.remarks.items()},
@@ -151,19 +154,8 @@ def _crew(outcome: Outcome | Refined) -> str:
 
 
 def _record(outcome: Outcome, files: Sequence[str]) -> dict[str, Any]:
-    return {
-        "folder": str(outcome.folder),
-        "files": list(files),
-        "points": outcome.points,
-        "chunks": outcome.chunks,
-        "computed": outcome.computed,
-        "untrusted": outcome.untrusted,
-        "stopped": bool(outcome.stopped),
-        "failed": [{"chunk": list(index), "reason": reason} for index, reason in outcome.failed],
-        "workers": outcome.workers,
-        "peak_bytes": outcome.peak_bytes,
-        "remarks": {str(bit.name).lower(): count for bit, count in outcome.remarks.items()},
-    }
+    failed = [{"chunk": list(index), "reason": reason} for index, reason in outcome.failed]
+    return _common_record(outcome, files) | {"chunks": outcome.chunks, "failed": failed}
 
 
 def _print(outcome: Outcome, files: Sequence[str], seconds: float) -> None:

@@ -35,6 +35,18 @@ def output_folder(text: str) -> Path:
     return folder
 
 
+def results_folder(text: str, name: str, force: bool) -> Path:
+    """Check the folder that is to receive the file `name`; nothing is made yet.
+
+    Raises InputError or OutputError as `output_folder`, and OutputError where the file is there already, unless
+    `force` says that it may go.
+    """
+    folder = output_folder(text)
+    if folder.exists() and inside(folder, name).exists() and not force:
+        raise OutputError(f"{folder.name} holds {name} already; choose another --out or replace it with --force")
+    return folder
+
+
 def inside(folder: Path, name: str) -> Path:
     """The path of a file to be made in a folder, after links are followed.
 

@@ -7,7 +7,7 @@ Free of jax, so that a file can be checked and estimated without loading the num
 """
 
 import math
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -137,15 +137,21 @@ def plan(spec: Spec) -> Plan:
     return Plan(spec, axes, chunk_shape(tuple(axis.values.size for axis in axes)))
 
 
+def check_names(full: Plan, values: Iterable[str]) -> list[str]:
+    """The names of the axes, if all names given with --at are among them. Raises InputError for others."""
+    names = [axis.name for axis in full.axes]
+    for name in values:
+        if name not in names:
+            raise InputError(f"--at {name}: is not an axis of this file; its axes are {', '.join(names) or 'none'}")
+    return names
+
+
 def at(full: Plan, values: Mapping[str, float]) -> Plan:
     """One point of a plan. values: a number per axis name, on the grid or off it.
 
     Raises InputError for names that are no axes, axes without a value, or values an axis cannot take.
     """
-    names = [axis.name for axis in full.axes]
-    for name in values:
-        if name not in names:
-            raise InputError(f"--at {name}: is not an axis of this file; its axes are {', '.join(names) or 'none'}")
+    names = check_names(full, values)
     missing = [name for name in names if name not in values]
     if missing:
         example = " ".join(f"--at {axis.name}={axis.values[0]:g}" for axis in full.axes if axis.name in missing)
